@@ -1,0 +1,114 @@
+//! Every analysis setting with its default. Each is a key of `[analysis]` in `recording.toml` and a flag of the
+//! command line; the values used are written to `run.json`.
+
+use serde::{Deserialize, Serialize};
+
+use crate::rates::Response;
+
+/// The analysis settings of one run.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+#[serde(default, deny_unknown_fields)]
+pub struct Analysis {
+    /// Which parts of a step get a rate and a fit.
+    pub responses: Vec<Response>,
+    /// The last part of a step that counts as `steady`, as a fraction of its length (0 to 1).
+    pub steady_fraction: f64,
+    /// Refractoriness constant R of LvR, seconds (Shinomoto et al. 2009: 5 ms).
+    pub lvr_refractory_s: f64,
+    /// Whether profile intervals are computed; without them intervals are null and `open` rests on the ramp fit.
+    pub profiles: bool,
+    /// Whether figures are drawn.
+    pub figures: bool,
+    /// Steps with a rate from intervals below which a response is `silent`.
+    pub min_interval_steps: usize,
+    /// Upper over lower bound of max rate above which a closed ceiling is `loose`.
+    pub loose_ratio: f64,
+    /// Mean rate above the peak level, as a fraction of the peak, below which a cell may be `declining`.
+    pub declining_fraction: f64,
+    /// Standard errors by which at least two levels above the peak must fall short of it.
+    pub declining_se: f64,
+    /// Mean rate on the last level, as a fraction of the peak, below which a cell is `declining` by that alone.
+    pub declining_last_fraction: f64,
+    /// Number of drives in the grid of `curves.parquet`, per cell and response.
+    pub curve_points: usize,
+}
+
+impl Default for Analysis {
+    fn default() -> Self {
+        Self {
+            responses: vec![Response::Whole, Response::Steady, Response::Onset],
+            steady_fraction: 0.5,
+            lvr_refractory_s: 0.005,
+            profiles: true,
+            figures: true,
+            min_interval_steps: 3,
+            loose_ratio: 1.5,
+            declining_fraction: 0.85,
+            declining_se: 3.0,
+            declining_last_fraction: 0.5,
+            curve_points: 101,
+        }
+    }
+}
+
+/// A setting outside its allowed range.
+#[derive(Clone, Debug, PartialEq, thiserror::Error)]
+#[error("{key} = {value} is outside {limit}\n  set it under [analysis] in recording.toml or with --{}", key.replace('_', "-"))]
+pub struct SettingsError {
+    /// The setting's key.
+    pub key: &'static str,
+    /// The value given.
+    pub value: String,
+    /// The allowed range in words.
+    pub limit: &'static str,
+}
+
+impl Analysis {
+    /// Checks every setting against its range.
+    ///
+    /// # Errors
+    /// The first setting that is out of range, with its limit.
+    pub fn validate(&self) -> Result<(), SettingsError> {
+        let err = |key, value: String, limit| Err(SettingsError { key, value, limit });
+        if self.responses.is_empty() {
+            return err("responses", "[]".into(), "at least one of whole, steady, onset");
+        }
+        let mut seen = self.responses.clone();
+        seen.sort();
+        seen.dedup();
+        if seen.len() != self.responses.len() {
+            return err("responses", format!("{:?}", self.responses), "each response once");
+        }
+        if !(self.steady_fraction > 0.0 && self.steady_fraction <= 1.0) {
+            return err("steady_fraction", self.steady_fraction.to_string(), "(0, 1]");
+        }
+        if !(self.lvr_refractory_s >= 0.0 && self.lvr_refractory_s < 1.0) {
+            return err("lvr_refractory_s", self.lvr_refractory_s.to_string(), "[0, 1) s");
+        }
+        if self.min_interval_steps < 1 {
+            return err(
+                "min_interval_steps",
+                self.min_interval_steps.to_string(),
+                "1 or more",
+            );
+        }
+        if !(self.loose_ratio > 1.0 && self.loose_ratio.is_finite()) {
+            return err("loose_ratio", self.loose_ratio.to_string(), "above 1, finite");
+        }
+        for (key, value) in [
+            ("declining_fraction", self.declining_fraction),
+            ("declining_last_fraction", self.declining_last_fraction),
+        ] {
+            if !(value > 0.0 && value < 1.0) {
+                return err(key, value.to_string(), "(0, 1)");
+            }
+        }
+        if !(self.declining_se > 0.0 && self.declining_se.is_finite()) {
+            return err("declining_se", self.declining_se.to_string(), "above 0, finite");
+        }
+        if !(2..=10_001).contains(&self.curve_points) {
+            return err("curve_points", self.curve_points.to_string(), "2 to 10001");
+        }
+        Ok(())
+    }
+}
