@@ -1,1 +1,3 @@
-//! fit
+//! From rates to a rate function: objective, solver, extra SD, profiles.
+
+pub mod solver;

@@ -1,0 +1,321 @@
+//! The saturating hyperbola with Gaussian input noise averaged in, in standard form.
+//!
+//! ```text
+//! h(z, s) = E[H(z + s X)],  H(u) = u/(1+u) for u > 0 and 0 otherwise,  X ~ N(0, 1)
+//! rate    = max_rate * h((drive - threshold)/half_rise, noise_sd/half_rise)
+//! ```
+//!
+//! H is the rectangular hyperbola (Michaelis & Menten 1913; for rates Naka & Rushton 1966 with exponent 1). With
+//! p(u) the density of N(z, s^2) and p0 = p(0), everything is an integral over u > 0 (derivatives of H in the sense
+//! of distributions):
+//!
+//! ```text
+//! h      = int u/(1+u) p du            dh/dz = int (1+u)^-2 p du
+//! bend   = int u/(1+u)^2 p du          = z dh/dz + s dh/ds: minus the derivative by ln half_rise
+//! excess = int u^2/(1+u)^2 p du        = h - bend
+//! d2h/dz2 = p0 - 2 int (1+u)^-3 p du   dh/ds = s d2h/dz2 (heat equation)
+//! ```
+//!
+//! The substitution t = ln(1+u) moves the pole at u = -1 to infinity, after which one Gauss-Legendre panel over the
+//! part of u > 0 that matters is accurate to rounding. Far above the threshold (z/s > 10) the kink is out of reach
+//! of the noise and Gauss-Hermite nodes do. Two evaluations are offered: [`evaluate`] with 80 nodes, the referee, and
+//! [`Kernel`], made once per `s` and used by the fit, with as few nodes as keep 1e-11.
+
+use std::f64::consts::PI;
+use std::sync::LazyLock;
+
+use super::quadrature::{Rule, hermite, legendre};
+use super::vector_exp;
+
+/// Value and derivatives of h at one (z, s). All dimensionless.
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct Smoothed {
+    /// h(z, s), between 0 and 1.
+    pub h: f64,
+    /// dh/dz.
+    pub dh_dz: f64,
+    /// dh/ds.
+    pub dh_ds: f64,
+    /// d2h/dz2.
+    pub d2h_dz2: f64,
+    /// z dh/dz + s dh/ds, computed without cancellation.
+    pub bend: f64,
+    /// h - bend, computed without cancellation.
+    pub excess: f64,
+}
+
+/// Below this z/s the density at zero underflows and everything is zero.
+const LOWEST_W: f64 = -38.5;
+
+static LEGENDRE_80: LazyLock<Rule<80>> = LazyLock::new(legendre::<80>);
+static HERMITE_24: LazyLock<Rule<24>> = LazyLock::new(hermite::<24>);
+
+/// phi(w)/s at w = z/s, with the exponent in two pieces so that the far tail keeps its digits.
+fn density_at_zero(z: f64, s: f64) -> f64 {
+    let w = z / s;
+    // z = w s + remainder exactly, so (z/s)^2/2 = w^2/2 + w remainder/s to more than double precision.
+    let remainder = (-w).mul_add(s, z) / s;
+    let high = w * w;
+    let low = w.mul_add(w, -high) + 2.0 * w * remainder;
+    (-0.5 * high).exp() * (1.0 - 0.5 * low) / (s * (2.0 * PI).sqrt())
+}
+
+/// h and its derivatives to about 1e-15 relative, for s > 0: the referee of the faster [`Kernel`].
+///
+/// `z` = (drive - threshold)/half_rise, `s` = noise_sd/half_rise. `s` = 0 gives the noise-free hyperbola (its
+/// derivatives at the kink z = 0 are those from above). Not a number where an argument is not finite or `s` < 0.
+pub fn evaluate(z: f64, s: f64) -> Smoothed {
+    if !(z.is_finite() && s.is_finite() && s >= 0.0) {
+        let nan = f64::NAN;
+        return Smoothed { h: nan, dh_dz: nan, dh_ds: nan, d2h_dz2: nan, bend: nan, excess: nan };
+    }
+    if s == 0.0 {
+        return noise_free(z);
+    }
+    let w = z / s;
+    if w < LOWEST_W {
+        return Smoothed::default();
+    }
+    if w > 10.0 {
+        let rule = &*HERMITE_24;
+        let mut sums = [0.0; 5];
+        for (x, weight) in rule.nodes.iter().zip(rule.weights) {
+            add_node(&mut sums, z + s * x, weight);
+        }
+        return finish(sums, 1.0, density_at_zero(z, s), z, s);
+    }
+    let rule = &*LEGENDRE_80;
+    let p0 = density_at_zero(z, s);
+    let mut sums = [0.0; 5];
+    if z <= 0.0 {
+        // All of q is positive: p = p0 exp(-q). Upper limit where q = 41.
+        let reach = 2.0 * 41.0 * s * s;
+        let top = reach / (-z + (z * z + reach).sqrt());
+        let length = top.ln_1p();
+        let mut bent = 0.0;
+        for (x, weight) in rule.nodes.iter().zip(rule.weights) {
+            let u = (length * x).exp_m1();
+            let q = u * (u - 2.0 * z) / (2.0 * s * s);
+            let mass = length * weight * (1.0 + u);
+            add_node(&mut sums, u, mass * (-q).exp());
+            bent += mass * -(-q).exp_m1() / (1.0 + u).powi(3);
+        }
+        let d2h_dz2 = p0 * ((1.0 + top).powi(-2) + 2.0 * bent);
+        let [h, dh_dz, bend, excess, _] = sums.map(|sum| p0 * sum);
+        return Smoothed { h, dh_dz, dh_ds: s * d2h_dz2, d2h_dz2, bend, excess };
+    }
+    let c = s / (1.0 + z);
+    let lowest = -z.ln_1p();
+    let from = if 9.06 * c < 1.0 { lowest.max((-9.06 * c).ln_1p()) } else { lowest };
+    let to = (9.06 * c).ln_1p();
+    let mut bent = 0.0;
+    for (x, weight) in rule.nodes.iter().zip(rule.weights) {
+        let tau = from + (to - from) * x;
+        let grown = tau.exp_m1();
+        let u = z + (1.0 + z) * grown;
+        let xi = grown / c;
+        let mass = (to - from) * weight * (1.0 + grown) / c / (2.0 * PI).sqrt();
+        add_node(&mut sums, u, mass * (-0.5 * xi * xi).exp());
+        // The same node's share of int 2 (1+u)^-3 (p0 - p) du, with du = s dxi.
+        let q = u * (u - 2.0 * z) / (2.0 * s * s);
+        bent -= mass * (2.0 * PI).sqrt() * s * (-q).exp_m1() / (1.0 + u).powi(3);
+    }
+    let top = z + 9.06 * s;
+    let [h, dh_dz, bend, excess, cubed] = sums;
+    let d2h_dz2 =
+        if w < 3.0 { p0 * ((1.0 + top).powi(-2) + 2.0 * bent) } else { p0 - 2.0 * cubed };
+    Smoothed { h, dh_dz, dh_ds: s * d2h_dz2, d2h_dz2, bend, excess }
+}
+
+/// One node's share of the five integrals.
+#[inline(always)]
+fn add_node(sums: &mut [f64; 5], u: f64, mass: f64) {
+    let inverse = 1.0 / (1.0 + u);
+    let ratio = u * inverse;
+    sums[0] += mass * ratio;
+    sums[1] += mass * inverse * inverse;
+    sums[2] += mass * ratio * inverse;
+    sums[3] += mass * ratio * ratio;
+    sums[4] += mass * inverse * inverse * inverse;
+}
+
+#[inline(always)]
+fn finish(sums: [f64; 5], factor: f64, p0: f64, _z: f64, s: f64) -> Smoothed {
+    let d2h_dz2 = p0 - 2.0 * factor * sums[4];
+    Smoothed {
+        h: factor * sums[0],
+        dh_dz: factor * sums[1],
+        dh_ds: s * d2h_dz2,
+        d2h_dz2,
+        bend: factor * sums[2],
+        excess: factor * sums[3],
+    }
+}
+
+/// The limit s = 0.
+fn noise_free(z: f64) -> Smoothed {
+    if z < 0.0 {
+        return Smoothed::default();
+    }
+    let inverse = 1.0 / (1.0 + z);
+    let ratio = z * inverse;
+    Smoothed {
+        h: ratio,
+        dh_dz: inverse * inverse,
+        dh_ds: 0.0,
+        d2h_dz2: -2.0 * inverse * inverse * inverse,
+        bend: ratio * inverse,
+        excess: ratio * ratio,
+    }
+}
+
+/// Rules of the fast evaluation, fetched once a fit.
+#[derive(Debug)]
+struct FastRules {
+    below: Rule<32>,
+    above: Rule<48>,
+    broad: Rule<72>,
+    hermite_8: Rule<8>,
+    hermite_16: Rule<16>,
+    hermite_24: Rule<24>,
+}
+
+static FAST: LazyLock<FastRules> = LazyLock::new(|| FastRules {
+    below: legendre(),
+    above: legendre(),
+    broad: legendre(),
+    hermite_8: hermite(),
+    hermite_16: hermite(),
+    hermite_24: hermite(),
+});
+
+/// Number of partial sums kept apart, so that the compiler can add in vector lanes and the order stays fixed.
+const LANES: usize = 8;
+
+/// The curve at one fixed `s`, for many `z`: what a pass of the fit evaluates.
+///
+/// Keeps 1e-11 relative to the referee for s from 0 to 1e3 and z/s from -37 up. Call it inside
+/// [`vectorised`], where the compiler may use the machine's widest vectors.
+#[derive(Clone, Copy, Debug)]
+pub struct Kernel {
+    rules: &'static FastRules,
+    s: f64,
+    half_precision: f64,
+    p0_scale: f64,
+}
+
+impl Kernel {
+    /// Prepares the curve for `s` = noise_sd/half_rise, positive.
+    pub fn new(s: f64) -> Self {
+        Self {
+            rules: &FAST,
+            s,
+            half_precision: 0.5 / (s * s),
+            p0_scale: 1.0 / (s * (2.0 * PI).sqrt()),
+        }
+    }
+
+    /// h and its derivatives at `z`.
+    #[inline(always)]
+    pub fn at(&self, z: f64) -> Smoothed {
+        let s = self.s;
+        let w = z / s;
+        if w < LOWEST_W {
+            return Smoothed::default();
+        }
+        let p0 = self.p0_scale * vector_exp::exp(-0.5 * w * w);
+        let c = s / (1.0 + z);
+        if w > 7.5 && c < 0.1 {
+            let sums = if c < 0.012 {
+                self.far(&self.rules.hermite_8, z)
+            } else if c < 0.05 {
+                self.far(&self.rules.hermite_16, z)
+            } else {
+                self.far(&self.rules.hermite_24, z)
+            };
+            return finish(sums, 1.0, p0, z, s);
+        }
+        let sums = if z <= 0.0 {
+            let reach = 62.0 * s * s;
+            let top = reach / (-z + (z * z + reach).sqrt());
+            self.near(&self.rules.below, z, top)
+        } else if s <= 0.5 {
+            self.near(&self.rules.above, z, z + 7.6 * s)
+        } else {
+            self.near(&self.rules.broad, z, z + 7.6 * s)
+        };
+        finish(sums, p0, p0, z, s)
+    }
+
+    /// Gauss-Hermite, where the kink is out of the noise's reach.
+    #[inline(always)]
+    fn far<const N: usize>(&self, rule: &Rule<N>, z: f64) -> [f64; 5] {
+        let mut lanes = [[0.0; LANES]; 5];
+        for block in 0..N / LANES {
+            for lane in 0..LANES {
+                let i = block * LANES + lane;
+                let u = z + self.s * rule.nodes[i];
+                let inverse = 1.0 / (1.0 + u);
+                let ratio = u * inverse;
+                let mass = rule.weights[i];
+                let squared = mass * inverse * inverse;
+                lanes[0][lane] += mass * ratio;
+                lanes[1][lane] += squared;
+                lanes[2][lane] += mass * ratio * inverse;
+                lanes[3][lane] += mass * ratio * ratio;
+                lanes[4][lane] += squared * inverse;
+            }
+        }
+        fold(&lanes)
+    }
+
+    /// One Gauss-Legendre panel in t = ln(1+u) from 0 to `top`, relative to p0.
+    #[inline(always)]
+    fn near<const N: usize>(&self, rule: &Rule<N>, z: f64, top: f64) -> [f64; 5] {
+        let length = top.ln_1p();
+        if length <= 0.35 { self.panel::<N, true>(rule, z, length) } else { self.panel::<N, false>(rule, z, length) }
+    }
+
+    #[inline(always)]
+    fn panel<const N: usize, const SHORT: bool>(&self, rule: &Rule<N>, z: f64, length: f64) -> [f64; 5] {
+        let twice = 2.0 * z;
+        let mut lanes = [[0.0; LANES]; 5];
+        for block in 0..N / LANES {
+            for lane in 0..LANES {
+                let i = block * LANES + lane;
+                let t = length * rule.nodes[i];
+                let (u, grown) = if SHORT {
+                    let u = t * vector_exp::growth(t);
+                    (u, 1.0 + u)
+                } else {
+                    let grown = vector_exp::exp(t);
+                    (grown - 1.0, grown)
+                };
+                let inverse = 1.0 / grown;
+                let ratio = u * inverse;
+                let density = vector_exp::exp(-u * (u - twice) * self.half_precision);
+                let mass = rule.weights[i] * grown * density;
+                let squared = mass * inverse * inverse;
+                lanes[0][lane] += mass * ratio;
+                lanes[1][lane] += squared;
+                lanes[2][lane] += mass * ratio * inverse;
+                lanes[3][lane] += mass * ratio * ratio;
+                lanes[4][lane] += squared * inverse;
+            }
+        }
+        fold(&lanes).map(|sum| sum * length)
+    }
+}
+
+#[inline(always)]
+fn fold(lanes: &[[f64; LANES]; 5]) -> [f64; 5] {
+    lanes.map(|l| ((l[0] + l[4]) + (l[2] + l[6])) + ((l[1] + l[5]) + (l[3] + l[7])))
+}
+
+/// Runs `work` compiled for the widest vectors this machine has. The bits of the result do not depend on the
+/// machine: no operation is fused and every sum has a fixed order.
+#[inline(always)]
+pub fn vectorised<T>(work: impl FnOnce() -> T) -> T {
+    static ARCH: LazyLock<pulp::Arch> = LazyLock::new(pulp::Arch::new);
+    ARCH.dispatch(work)
+}
