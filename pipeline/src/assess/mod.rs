@@ -2,6 +2,7 @@
 
 use std::sync::Arc;
 
+pub use crate::fit::Estimate;
 use crate::rates::{Response, StepRate};
 use crate::recording::{CellId, DriveKind, ProtocolStep};
 
@@ -62,19 +63,6 @@ impl Ceiling {
             Self::Silent => "silent",
         }
     }
-}
-
-/// One estimated quantity: value, standard error, 95 % interval. `None` is not estimated; a bound may be infinite.
-#[derive(Clone, Copy, Debug, Default, PartialEq)]
-pub struct Estimate {
-    /// Best value.
-    pub value: Option<f64>,
-    /// Standard error by the delta method.
-    pub se: Option<f64>,
-    /// Lower 95 % bound (profile likelihood).
-    pub lo: Option<f64>,
-    /// Upper 95 % bound (profile likelihood).
-    pub hi: Option<f64>,
 }
 
 /// How serious a flag is.

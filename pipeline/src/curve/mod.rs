@@ -2,4 +2,5 @@
 
 pub mod quadrature;
 pub mod smoothed_hyperbola;
+pub mod smoothed_ramp;
 mod vector_exp;

@@ -82,7 +82,7 @@ pub fn evaluate(z: f64, s: f64) -> Smoothed {
         for (x, weight) in rule.nodes.iter().zip(rule.weights) {
             add_node(&mut sums, z + s * x, weight);
         }
-        return finish(sums, 1.0, density_at_zero(z, s), z, s);
+        return finish(sums, density_at_zero(z, s), s);
     }
     let rule = &*LEGENDRE_80;
     let p0 = density_at_zero(z, s);
@@ -128,7 +128,6 @@ pub fn evaluate(z: f64, s: f64) -> Smoothed {
 }
 
 /// One node's share of the five integrals.
-#[inline(always)]
 fn add_node(sums: &mut [f64; 5], u: f64, mass: f64) {
     let inverse = 1.0 / (1.0 + u);
     let ratio = u * inverse;
@@ -139,17 +138,9 @@ fn add_node(sums: &mut [f64; 5], u: f64, mass: f64) {
     sums[4] += mass * inverse * inverse * inverse;
 }
 
-#[inline(always)]
-fn finish(sums: [f64; 5], factor: f64, p0: f64, _z: f64, s: f64) -> Smoothed {
-    let d2h_dz2 = p0 - 2.0 * factor * sums[4];
-    Smoothed {
-        h: factor * sums[0],
-        dh_dz: factor * sums[1],
-        dh_ds: s * d2h_dz2,
-        d2h_dz2,
-        bend: factor * sums[2],
-        excess: factor * sums[3],
-    }
+fn finish([h, dh_dz, bend, excess, cubed]: [f64; 5], p0: f64, s: f64) -> Smoothed {
+    let d2h_dz2 = p0 - 2.0 * cubed;
+    Smoothed { h, dh_dz, dh_ds: s * d2h_dz2, d2h_dz2, bend, excess }
 }
 
 /// The limit s = 0.
@@ -215,17 +206,16 @@ impl Kernel {
         }
     }
 
-    /// h and its derivatives at `z`.
+    /// h and its gradient at `z`.
     #[inline(always)]
-    pub fn at(&self, z: f64) -> Smoothed {
+    pub fn at(&self, z: f64) -> Slope {
         let s = self.s;
         let w = z / s;
         if w < LOWEST_W {
-            return Smoothed::default();
+            return Slope::default();
         }
-        let p0 = self.p0_scale * vector_exp::exp(-0.5 * w * w);
         let c = s / (1.0 + z);
-        if w > 7.5 && c < 0.1 {
+        let (factor, [dh_dz, bend, excess]) = if w > 7.5 && c < 0.1 {
             let sums = if c < 0.012 {
                 self.far(&self.rules.hermite_8, z)
             } else if c < 0.05 {
@@ -233,37 +223,37 @@ impl Kernel {
             } else {
                 self.far(&self.rules.hermite_24, z)
             };
-            return finish(sums, 1.0, p0, z, s);
-        }
-        let sums = if z <= 0.0 {
-            let reach = 62.0 * s * s;
-            let top = reach / (-z + (z * z + reach).sqrt());
-            self.near(&self.rules.below, z, top)
-        } else if s <= 0.5 {
-            self.near(&self.rules.above, z, z + 7.6 * s)
+            (1.0, sums)
         } else {
-            self.near(&self.rules.broad, z, z + 7.6 * s)
+            let sums = if z <= 0.0 {
+                let reach = 56.0 * s * s;
+                let top = reach / (-z + (z * z + reach).sqrt());
+                self.near(&self.rules.below, z, top)
+            } else if s <= 0.5 {
+                self.near(&self.rules.above, z, z + 7.4 * s)
+            } else {
+                self.near(&self.rules.broad, z, z + 7.4 * s)
+            };
+            (self.p0_scale * vector_exp::exp(-0.5 * w * w), sums)
         };
-        finish(sums, p0, p0, z, s)
+        let (dh_dz, bend, excess) = (factor * dh_dz, factor * bend, factor * excess);
+        Slope { h: bend + excess, dh_dz, bend, excess, dh_dlns: bend - z * dh_dz }
     }
 
     /// Gauss-Hermite, where the kink is out of the noise's reach.
     #[inline(always)]
-    fn far<const N: usize>(&self, rule: &Rule<N>, z: f64) -> [f64; 5] {
-        let mut lanes = [[0.0; LANES]; 5];
+    fn far<const N: usize>(&self, rule: &Rule<N>, z: f64) -> [f64; 3] {
+        let mut lanes = [[0.0; LANES]; 3];
         for block in 0..N / LANES {
             for lane in 0..LANES {
                 let i = block * LANES + lane;
                 let u = z + self.s * rule.nodes[i];
                 let inverse = 1.0 / (1.0 + u);
-                let ratio = u * inverse;
-                let mass = rule.weights[i];
-                let squared = mass * inverse * inverse;
-                lanes[0][lane] += mass * ratio;
-                lanes[1][lane] += squared;
-                lanes[2][lane] += mass * ratio * inverse;
-                lanes[3][lane] += mass * ratio * ratio;
-                lanes[4][lane] += squared * inverse;
+                let squared = rule.weights[i] * inverse * inverse;
+                let first = squared * u;
+                lanes[0][lane] += squared;
+                lanes[1][lane] += first;
+                lanes[2][lane] += first * u;
             }
         }
         fold(&lanes)
@@ -271,15 +261,20 @@ impl Kernel {
 
     /// One Gauss-Legendre panel in t = ln(1+u) from 0 to `top`, relative to p0.
     #[inline(always)]
-    fn near<const N: usize>(&self, rule: &Rule<N>, z: f64, top: f64) -> [f64; 5] {
+    fn near<const N: usize>(&self, rule: &Rule<N>, z: f64, top: f64) -> [f64; 3] {
         let length = top.ln_1p();
-        if length <= 0.35 { self.panel::<N, true>(rule, z, length) } else { self.panel::<N, false>(rule, z, length) }
+        if length <= 0.35 {
+            self.panel::<N, true>(rule, z, length)
+        } else {
+            self.panel::<N, false>(rule, z, length)
+        }
     }
 
     #[inline(always)]
-    fn panel<const N: usize, const SHORT: bool>(&self, rule: &Rule<N>, z: f64, length: f64) -> [f64; 5] {
+    fn panel<const N: usize, const SHORT: bool>(&self, rule: &Rule<N>, z: f64, length: f64) -> [f64; 3] {
         let twice = 2.0 * z;
-        let mut lanes = [[0.0; LANES]; 5];
+        let scale = -self.half_precision;
+        let mut lanes = [[0.0; LANES]; 3];
         for block in 0..N / LANES {
             for lane in 0..LANES {
                 let i = block * LANES + lane;
@@ -291,31 +286,63 @@ impl Kernel {
                     let grown = vector_exp::exp(t);
                     (grown - 1.0, grown)
                 };
-                let inverse = 1.0 / grown;
-                let ratio = u * inverse;
-                let density = vector_exp::exp(-u * (u - twice) * self.half_precision);
-                let mass = rule.weights[i] * grown * density;
-                let squared = mass * inverse * inverse;
-                lanes[0][lane] += mass * ratio;
-                lanes[1][lane] += squared;
-                lanes[2][lane] += mass * ratio * inverse;
-                lanes[3][lane] += mass * ratio * ratio;
-                lanes[4][lane] += squared * inverse;
+                let density = vector_exp::exp(u * (u - twice) * scale);
+                // (1+u)^-2 p du, with du = (1+u) dt.
+                let squared = rule.weights[i] * density / grown;
+                let first = squared * u;
+                lanes[0][lane] += squared;
+                lanes[1][lane] += first;
+                lanes[2][lane] += first * u;
             }
         }
         fold(&lanes).map(|sum| sum * length)
     }
 }
 
+/// What the fit needs of the curve at one z: h and its gradient, all dimensionless.
+#[derive(Clone, Copy, Debug, Default, PartialEq)]
+pub struct Slope {
+    /// h(z, s).
+    pub h: f64,
+    /// dh/dz.
+    pub dh_dz: f64,
+    /// z dh/dz + s dh/ds, without cancellation.
+    pub bend: f64,
+    /// h - bend, without cancellation.
+    pub excess: f64,
+    /// s dh/ds, as the difference of `bend` and z dh/dz: exact to rounding of `bend`.
+    pub dh_dlns: f64,
+}
+
 #[inline(always)]
-fn fold(lanes: &[[f64; LANES]; 5]) -> [f64; 5] {
+fn fold(lanes: &[[f64; LANES]; 3]) -> [f64; 3] {
     lanes.map(|l| ((l[0] + l[4]) + (l[2] + l[6])) + ((l[1] + l[5]) + (l[3] + l[7])))
+}
+
+/// Work that [`vectorised`] runs. Its `run`, and all that it calls, must be `#[inline(always)]`: only what is
+/// inlined is compiled for the machine's vectors.
+pub trait Pass {
+    /// What the work returns.
+    type Output;
+    /// Does the work.
+    fn run(self) -> Self::Output;
+}
+
+struct Op<W>(W);
+
+impl<W: Pass> pulp::NullaryFnOnce for Op<W> {
+    type Output = W::Output;
+
+    #[inline(always)]
+    fn call(self) -> W::Output {
+        self.0.run()
+    }
 }
 
 /// Runs `work` compiled for the widest vectors this machine has. The bits of the result do not depend on the
 /// machine: no operation is fused and every sum has a fixed order.
 #[inline(always)]
-pub fn vectorised<T>(work: impl FnOnce() -> T) -> T {
+pub fn vectorised<W: Pass>(work: W) -> W::Output {
     static ARCH: LazyLock<pulp::Arch> = LazyLock::new(pulp::Arch::new);
-    ARCH.dispatch(work)
+    ARCH.dispatch(Op(work))
 }

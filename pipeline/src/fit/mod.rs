@@ -1,3 +1,14 @@
 //! From rates to a rate function: objective, solver, extra SD, profiles.
 
+mod estimates;
+mod extra_sd;
+pub mod main_fit;
+pub mod objective;
+mod profile;
 pub mod solver;
+mod starts;
+
+pub use estimates::{Estimate, Estimates, estimates, t_quantile};
+pub use extra_sd::extra_variance;
+pub use objective::Point;
+pub use profile::{Side, profile_side};

@@ -222,7 +222,11 @@ pub fn cholesky<const P: usize>(a: &[[f64; P]; P]) -> Option<[[f64; P]; P]> {
 
 /// Solves a x = b for a symmetric positive definite `a` (lower triangle read); `None` unless positive definite.
 pub fn cholesky_solve<const P: usize>(a: &[[f64; P]; P], b: &[f64; P]) -> Option<[f64; P]> {
-    let l = cholesky(a)?;
+    Some(solve_factored(&cholesky(a)?, b))
+}
+
+/// Solves L L' x = b for the lower triangular factor that [`cholesky`] gives.
+pub fn solve_factored<const P: usize>(l: &[[f64; P]; P], b: &[f64; P]) -> [f64; P] {
     let mut x = *b;
     for i in 0..P {
         for k in 0..i {
@@ -236,7 +240,7 @@ pub fn cholesky_solve<const P: usize>(a: &[[f64; P]; P], b: &[f64; P]) -> Option
         }
         x[i] /= l[i][i];
     }
-    Some(x)
+    x
 }
 
 /// Step sizes below this, relative to the cost, are lost in rounding: a promised decrease this small that does not

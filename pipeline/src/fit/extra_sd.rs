@@ -1,0 +1,46 @@
+//! Between-step scatter beyond interval noise.
+
+/// The extra variance w^2 >= 0 that solves sum r_j^2/(e_j^2 + w^2) = `degrees`, zero where even w = 0 leaves the sum
+/// below it.
+///
+/// This is the restricted (REML-like) moment equation of methods for an additive variance; for a constant mean it is
+/// the estimator of Paule & Mandel (1982, *J. Res. NBS* 87:377). `residuals` and `standard_errors` share their unit
+/// (Hz here), the result has its square. `degrees` = points - parameters, positive; otherwise the result is 0. Newton
+/// steps on the reciprocal of the sum, which is concave and rising in w^2, approach the root from below.
+pub fn extra_variance(residuals: &[f64], standard_errors: &[f64], degrees: f64) -> f64 {
+    let mut variance = 0.0;
+    if !(degrees > 0.0) {
+        return variance;
+    }
+    for _ in 0..200 {
+        let (mut sum, mut slope) = (0.0, 0.0);
+        for (r, e) in residuals.iter().zip(standard_errors) {
+            let inverse = 1.0 / (e * e + variance);
+            sum += r * r * inverse;
+            slope += r * r * inverse * inverse;
+        }
+        let step = (sum / degrees - 1.0) * sum / slope;
+        if !(step > 1e-15 * variance) || !step.is_finite() {
+            break;
+        }
+        variance += step;
+    }
+    variance
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn solves_its_equation_or_is_zero() {
+        let r = [3.0, -1.0, 4.0, -2.0, 0.5, 6.0];
+        let e = [0.1, 1.0, 2.0, 0.01, 3.0, 0.5];
+        let v = extra_variance(&r, &e, 4.0);
+        let sum: f64 = r.iter().zip(e).map(|(r, e)| r * r / (e * e + v)).sum();
+        assert!(v > 0.0 && (sum - 4.0).abs() < 1e-10);
+        assert_eq!(extra_variance(&r, &[100.0; 6], 4.0), 0.0);
+        assert_eq!(extra_variance(&r, &e, 0.0), 0.0);
+        assert_eq!(extra_variance(&[0.0; 6], &e, 4.0), 0.0);
+    }
+}
