@@ -670,14 +670,23 @@ fn check_time_unit(cells: &[CellRecording], context: &Context<'_>) -> Result<(),
             })
             .sum()
     };
-    for (factor, table, unit) in [
-        (1e-3, TableKind::Spikes, "ms"),
-        (1e3, TableKind::Protocol, "ms"),
-        (1e-6, TableKind::Spikes, "us"),
-        (1e6, TableKind::Protocol, "us"),
+    let latest = |values: &mut dyn Iterator<Item = f64>| values.fold(0.0, f64::max);
+    let latest_spike = latest(&mut cells.iter().flat_map(|cell| cell.spikes_s.iter().copied()));
+    let latest_offset = latest(
+        &mut cells
+            .iter()
+            .flat_map(|cell| cell.steps.iter().map(|step| step.offset_s)),
+    );
+    for (factor, table, smaller) in [
+        (1e-3, TableKind::Spikes, 1000),
+        (1e3, TableKind::Protocol, 1000),
+        (1e-6, TableKind::Spikes, 1_000_000),
+        (1e6, TableKind::Protocol, 1_000_000),
     ] {
+        // Steps that start at 0 would take in nearly anything made small enough, so the largest times must agree too.
+        let ratio = latest_spike * factor / latest_offset;
         let fitting = inside(factor);
-        if fitting * 2 <= total {
+        if fitting * 2 <= total || !(1.0 / 30.0..=30.0).contains(&ratio) {
             continue;
         }
         let range = |values: &mut dyn Iterator<Item = f64>| {
@@ -700,24 +709,34 @@ fn check_time_unit(cells: &[CellRecording], context: &Context<'_>) -> Result<(),
                 .map(|input| input.path.clone())
                 .unwrap_or_default()
         };
-        let other = match table {
-            TableKind::Spikes => TableKind::Protocol,
-            _ => TableKind::Spikes,
-        };
+        let read_as = context
+            .time_units
+            .iter()
+            .find(|(of, _)| *of == table)
+            .map_or("s", |(_, unit)| unit);
+        let name = table.name();
+        let remedy = match (read_as, smaller) {
+            ("s", 1000) => Some("ms"),
+            ("s", _) | ("ms", 1000) => Some("us"),
+            _ => None,
+        }
+        .map_or_else(
+            || format!("check the unit of the times of {}, which were read as {read_as}", file(table)),
+            |unit| {
+                format!(
+                    "the times of {} were read as {read_as}; if they are in {unit}, add to {SET_FILE} (and take any other \
+                     unit out of the header):\n[units.{name}]\ntime = {unit:?}",
+                    file(table)
+                )
+            },
+        );
         return Err(ReadError::Data(Problem::of_file(
             file(table),
             format!(
-                "no spike lies inside a step: spikes run from {spikes}, the steps of the protocol from {steps}; \
-                 with the {} table's times {} times smaller, {fitting} of {total} spikes would",
-                table.name(),
-                if unit == "ms" { "1000" } else { "1000000" },
+                "no spike lies inside a step: spikes run from {spikes}, the steps of the protocol from {steps}; with the \
+                 times of the {name} table {smaller} times smaller, {fitting} of {total} spikes would"
             ),
-            format!(
-                "if its times are in {unit} while those of {} are in s, add to {SET_FILE}:\n[units.{}]\ntime = {unit:?}\n\
-                 (a unit in the header, such as time_{unit}, says the same)",
-                file(other),
-                table.name()
-            ),
+            remedy,
         )));
     }
     Ok(())

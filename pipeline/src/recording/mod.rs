@@ -89,6 +89,7 @@ pub fn read(folder: &Path, options: &ReadOptions<'_>) -> Result<RecordingSet, Re
         inputs,
         notes: Vec::new(),
         refused: Vec::new(),
+        time_units: Vec::new(),
     };
     let (mut cell_names, mut sweep_names, mut groups) =
         (Names::default(), Names::default(), Groups::default());

@@ -15,7 +15,7 @@ use super::names::{MISSING, Names};
 use super::rules::{self, Rule};
 use super::set_file::{SET_FILE, SetFile};
 use super::text::TextFile;
-use super::units::Unit;
+use super::units::{Quantity, Unit};
 
 /// What is gathered while the tables are read.
 pub struct Context<'a> {
@@ -29,6 +29,8 @@ pub struct Context<'a> {
     pub notes: Vec<String>,
     /// Rows refused so far.
     pub refused: Vec<RefusedRow>,
+    /// Unit in which each table's times came, by its first file.
+    pub time_units: Vec<(TableKind, &'static str)>,
 }
 
 impl Context<'_> {
@@ -139,6 +141,14 @@ pub fn read_table(
             .iter()
             .position(|spec| spec.name == "sweep")
             .is_some_and(|at| matched.positions[at].is_some());
+        let time = specs(table)
+            .iter()
+            .position(|spec| spec.quantity == Some(Quantity::Time));
+        if let Some(unit) = time.and_then(|at| matched.units[at])
+            && spans.is_empty()
+        {
+            context.time_units.push((table, unit.symbol));
+        }
         let input = context.inputs.len();
         context.inputs.push(InputFile {
             table: Some(table),
@@ -168,9 +178,9 @@ pub fn read_table(
             },
         )));
     }
-    for span in spans
+    if let Some(span) = spans
         .windows(2)
-        .filter(|pair| pair[0].has_sweep != pair[1].has_sweep)
+        .find(|pair| pair[0].has_sweep != pair[1].has_sweep)
     {
         let (with, without) = if span[0].has_sweep {
             (span[0], span[1])

@@ -27,6 +27,7 @@ pub fn meet(cell: &CellRecording) -> StepSpikes<'_> {
 
 #[cfg(test)]
 mod tests {
+    #![allow(clippy::single_range_in_vec_init)]
     use super::*;
     use crate::recording::{CellConstants, CellId, DriveKind, ProtocolStep, Sweep};
 

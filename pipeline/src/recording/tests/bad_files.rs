@@ -400,6 +400,20 @@ fn tables_that_do_not_fit_each_other() {
             &["[units.spikes]", "time = \"us\""],
         ),
         (
+            "cell,time_ms\na,600000\na,700000\n",
+            "cell,onset,offset,current\na,0.5,1,10\n",
+            "",
+            ErrorClass::Data,
+            &["read as ms", "[units.spikes]", "time = \"us\"", "header"],
+        ),
+        (
+            "cell,time_us\na,600000000\na,700000000\n",
+            "cell,onset,offset,current\na,0.5,1,10\n",
+            "",
+            ErrorClass::Data,
+            &["check the unit", "read as us"],
+        ),
+        (
             "cell,time_ms\na,500\n",
             PROTOCOL,
             "[units]\ntime = \"s\"",

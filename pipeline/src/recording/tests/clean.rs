@@ -375,7 +375,7 @@ fn the_result_does_not_depend_on_the_number_of_threads() {
             "c{},{},{}\n",
             mixed % 37,
             mixed % 5,
-            (mixed * 7 % 9973) as f64 / 1e3
+            (mixed % 211) as f64 / 25.0
         ));
     }
     for cell in 0..37 {
