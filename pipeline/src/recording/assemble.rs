@@ -323,6 +323,9 @@ fn place_steps(
             cell.sweeps.push(Sweep { name, spikes: 0..0 });
             at += 1;
         }
+        if let Some(row) = steps.iter().flat_map(|(_, rows)| rows).next() {
+            cell.drive_kind = row.kind;
+        }
         if let Some((rule, detail)) = refuse_cell(&steps) {
             for row in steps.iter().flat_map(|(_, rows)| rows) {
                 let refusal = refuse_step(tables, row, rule, Some(&detail));
@@ -334,9 +337,6 @@ fn place_steps(
             });
             cell.sweeps.clear();
             continue;
-        }
-        if let Some(row) = steps.iter().flat_map(|(_, rows)| rows).next() {
-            cell.drive_kind = row.kind;
         }
         for (sweep, rows) in steps {
             for (index, row) in rows.into_iter().enumerate() {

@@ -147,9 +147,15 @@ impl ColumnarFile {
         let groups: Vec<usize> = metadata.row_groups.iter().map(|group| group.num_rows()).collect();
         let (mut start, mut next) = (0, 0);
         while next < groups.len() {
-            let mut rows = 0;
-            while next < groups.len() && (rows == 0 || rows + groups[next] <= ROWS) {
+            let (mut rows, mut taken) = (0, 0);
+            while next < groups.len() {
+                // Two row groups at a time keep two threads busy where groups are large.
+                let limit = if taken < 2 { 4 * ROWS } else { ROWS };
+                if taken > 0 && rows + groups[next] > limit {
+                    break;
+                }
                 rows += groups[next];
+                taken += 1;
                 next += 1;
             }
             if rows == 0 {

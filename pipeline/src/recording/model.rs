@@ -105,7 +105,7 @@ pub struct CellRecording {
     pub id: CellId,
     /// Group from the cell table.
     pub group: Option<Arc<str>>,
-    /// Kind of drive of its protocol; [`DriveKind::Current`] for a cell without any accepted step.
+    /// Kind of drive of its protocol (of its first step where it mixes them); current for a cell without any step.
     pub drive_kind: DriveKind,
     /// Membrane constants from the cell table.
     pub constants: CellConstants,

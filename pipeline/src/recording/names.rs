@@ -15,19 +15,20 @@ pub struct Names {
     codes: PlHashMap<Arc<str>, u32>,
     integers: PlHashMap<i64, u32>,
     names: Vec<Arc<str>>,
-    /// The last text looked up: tables are mostly sorted, so the next row mostly repeats it.
+    /// The last name looked up: tables are mostly sorted, so the next row mostly repeats it.
     last: Option<u32>,
+    last_integer: Option<(i64, u32)>,
 }
 
 impl Names {
     /// The code of a name; blanks around it do not count, and [`MISSING`] stands for an empty one.
     pub fn code(&mut self, name: &str) -> u32 {
-        let name = name.trim();
         if let Some(last) = self.last
             && *self.names[last as usize] == *name
         {
             return last;
         }
+        let name = name.trim();
         if name.is_empty() {
             return MISSING;
         }
@@ -47,11 +48,20 @@ impl Names {
 
     /// The code of an integer name, the same as that of its text.
     pub fn code_of_integer(&mut self, name: i64) -> u32 {
-        if let Some(&code) = self.integers.get(&name) {
+        if let Some((last, code)) = self.last_integer
+            && last == name
+        {
             return code;
         }
-        let code = self.code(&name.to_string());
-        self.integers.insert(name, code);
+        let code = match self.integers.get(&name) {
+            Some(&code) => code,
+            None => {
+                let code = self.code(&name.to_string());
+                self.integers.insert(name, code);
+                code
+            }
+        };
+        self.last_integer = Some((name, code));
         code
     }
 

@@ -36,18 +36,17 @@ pub fn read(
 ) -> Result<Spikes, ReadError> {
     let mut spikes = Spikes::default();
     let spans = read_table(TableKind::Spikes, files, context, |origin, batch, context| {
-        let cell = codes(&batch, 0, origin.file, cells)?;
-        let sweep = codes(&batch, 1, origin.file, sweeps)?;
         let mut bad = Vec::new();
-        let time = numbers(
-            &batch,
-            2,
-            SPIKES[2].name,
-            origin.units[2],
-            true,
-            origin.file,
-            &mut bad,
-        )?;
+        let (cell, (sweep, time)) = rayon::join(
+            || codes(&batch, 0, origin.file, cells),
+            || {
+                let sweep = codes(&batch, 1, origin.file, sweeps);
+                let unit = origin.units[2];
+                let time = numbers(&batch, 2, SPIKES[2].name, unit, true, origin.file, &mut bad);
+                (sweep, time)
+            },
+        );
+        let (cell, sweep, time) = (cell?, sweep?, time?);
         for (row, &time) in time.iter().enumerate() {
             if time < 0.0 {
                 bad.push(BadValue {

@@ -180,17 +180,26 @@ impl TextFile {
         let width = self.headers.len().max(1);
         let mut frame = self.parse(start - guard, end, width + SURPLUS)?;
         let mut blank = 0;
-        let first = &frame.columns()[0];
-        if first.null_count() > 0 {
+        // A blank line leaves its fields null, save for the blanks it may hold itself.
+        let ours = &frame.columns()[..width];
+        if width == 1
+            || ours
+                .first()
+                .into_iter()
+                .chain(ours.last())
+                .any(|column| column.null_count() > 0)
+        {
             let height = frame.height();
             let mut keep = vec![false; height];
             for column in frame.columns() {
                 if column.null_count() == height {
                     continue;
                 }
-                let present = column.is_not_null();
-                for (keep, present) in keep.iter_mut().zip(present.iter()) {
-                    *keep |= present == Some(true);
+                let text = column
+                    .str()
+                    .map_err(|error| super::batch::internal(&self.name, &error))?;
+                for (keep, field) in keep.iter_mut().zip(text.iter()) {
+                    *keep = *keep || field.is_some_and(|field| !field.trim().is_empty());
                 }
             }
             blank = keep.iter().filter(|keep| !**keep).count();
@@ -435,7 +444,7 @@ impl Layout {
                 (_, b'\n') => {
                     let is_blank = bytes[record_start..at]
                         .iter()
-                        .all(|&b| b == b'\r' || b == separator);
+                        .all(|&b| matches!(b, b'\r' | b' ' | b'\t') || b == separator);
                     record += u64::from(!is_blank || header_end.is_none());
                     record_start = at + 1;
                     if header_end.is_none() {

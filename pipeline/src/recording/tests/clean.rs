@@ -122,6 +122,13 @@ fn spelling_does_not_matter() {
             ],
         ),
         (
+            "lines of blanks",
+            vec![
+                ("spikes.csv", format!("{SPIKES}   \n\t \n")),
+                ("protocol.csv", format!("{PROTOCOL}  \r\n")),
+            ],
+        ),
+        (
             "no last newline",
             vec![
                 ("spikes.csv", SPIKES.trim_end().into()),

@@ -380,6 +380,9 @@ fn a_refused_cell_keeps_its_place() {
         assert!(refusal.sentence.contains(rule.remedy));
         assert!(refused[0].steps.is_empty() && refused[0].spikes_s.is_empty());
         assert_eq!(cell(&set, "a").spikes_s, [0.5]);
+        if rule.name == "varying-inhibition" {
+            assert_eq!(refused[0].drive_kind, DriveKind::Conductance);
+        }
     }
 }
 
