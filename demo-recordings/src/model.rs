@@ -373,7 +373,8 @@ mod tests {
                 .windows(2)
                 .map(|pair| pair[1] - pair[0])
                 .fold(f64::INFINITY, f64::min);
-            assert!((7.3 - 1e-9..7.6).contains(&shortest), "{shortest} ms");
+            // The noise-free interval is 7.66 ms; noise comes closer to the limit than that, and never below it.
+            assert!((7.3 - 1e-9..7.65).contains(&shortest), "{shortest} ms");
         }
     }
 
@@ -424,7 +425,13 @@ mod tests {
         let rate = rate_hz(&late);
         let without = rate_hz(&spikes(plain(), Input::current(600.0 - 2.0 * 2.0 * rate), 4000.0));
         assert!((rate / without - 1.0).abs() < 0.01, "{rate} Hz, {without} Hz");
-        assert!(1000.0 / (found[1] - found[0]) > 1.5 * rate, "the onset is faster");
+        let onset = 1000.0 / (found[1] - found[0]);
+        let unadapted = rate_hz(&spikes(plain(), Input::current(600.0), 4000.0));
+        assert!(
+            (onset / unadapted - 1.0).abs() < 0.01,
+            "{onset} Hz, {unadapted} Hz"
+        );
+        assert!(rate < 0.9 * onset, "{rate} Hz of {onset} Hz");
     }
 
     #[test]
