@@ -11,7 +11,9 @@
 //! own shape back.
 //!
 //! The same bytes come out every time: one ChaCha stream a cell from a fixed seed, 64-bit floating-point
-//! arithmetic, one thread, and a compressor whose output depends on nothing but its input.
+//! arithmetic, one thread, and a compressor whose output depends on nothing but its input. `exp` and `ln` come from the
+//! platform and may differ between platforms in the last bit; the membrane forgets such a difference, and spike times are
+//! rounded to 0.01 or 0.1 ms.
 
 pub mod faults;
 pub mod model;

@@ -153,7 +153,7 @@ impl Kind {
                 });
             }
             Quirk::Silent => m.g_leak_ns *= 20.0,
-            Quirk::Spontaneous => m.e_leak_mv = m.v_threshold_mv - 5.0,
+            Quirk::Spontaneous => m.e_leak_mv = m.v_threshold_mv - 3.5,
             Quirk::Plain
             | Quirk::Drift
             | Quirk::FewLevels
