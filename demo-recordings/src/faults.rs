@@ -302,7 +302,7 @@ pub const CONDUCTANCE_PROTOCOL: &[Fault] = &[
         "G-05",
         36,
         Is("G-05\t44.000\t44.800\t\t0.0"),
-        "no-drive",
+        "missing-value",
         "no excitatory conductance",
     ),
     fault(
