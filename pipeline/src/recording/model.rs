@@ -105,7 +105,7 @@ pub struct CellRecording {
     pub id: CellId,
     /// Group from the cell table.
     pub group: Option<Arc<str>>,
-    /// Kind of drive of its protocol.
+    /// Kind of drive of its protocol (of its first step where it mixes them); current for a cell without any step.
     pub drive_kind: DriveKind,
     /// Membrane constants from the cell table.
     pub constants: CellConstants,
@@ -119,6 +119,22 @@ pub struct CellRecording {
     pub spikes_s: Vec<f64>,
     /// Set when the whole cell is refused; its rows are then in the refused table.
     pub refusal: Option<CellRefusal>,
+}
+
+impl CellRecording {
+    /// The spikes of a step of this cell: those with onset <= t < offset, ascending, seconds.
+    ///
+    /// Empty for a step that names a sweep this cell does not have.
+    pub fn spikes_in(&self, step: &ProtocolStep) -> &[f64] {
+        let spikes = self
+            .sweeps
+            .get(step.sweep)
+            .and_then(|sweep| self.spikes_s.get(sweep.spikes.clone()))
+            .unwrap_or_default();
+        let start = spikes.partition_point(|&time| time < step.onset_s);
+        let end = spikes.partition_point(|&time| time < step.offset_s);
+        spikes.get(start..end).unwrap_or_default()
+    }
 }
 
 /// Which table of a set a row belongs to.
@@ -198,8 +214,6 @@ pub struct RecordingSet {
     pub name: String,
     /// The set's folder.
     pub folder: PathBuf,
-    /// Kind of drive of the set.
-    pub drive_kind: DriveKind,
     /// Whether any table has a `sweep` column.
     pub has_sweeps: bool,
     /// Every file read, `recording.toml` first where there is one, then spikes, protocol, cells.
@@ -220,4 +234,18 @@ pub struct RecordingSet {
     pub analysis: Analysis,
     /// What was noticed and settled while reading, in sentences for the summary (units found in headers and so on).
     pub notes: Vec<String>,
+}
+
+impl RecordingSet {
+    /// The kinds of drive of the cells that have steps, current first, each once.
+    pub fn drive_kinds(&self) -> Vec<DriveKind> {
+        [DriveKind::Current, DriveKind::Conductance]
+            .into_iter()
+            .filter(|kind| {
+                self.cells
+                    .iter()
+                    .any(|cell| !cell.steps.is_empty() && cell.drive_kind == *kind)
+            })
+            .collect()
+    }
 }
