@@ -1,1 +1,318 @@
-//! run
+//! The whole line, from a folder of tables to a result folder. The only module that knows every other.
+
+use std::path::{Path, PathBuf};
+use std::sync::atomic::{AtomicBool, Ordering};
+
+use rayon::prelude::*;
+
+use crate::assess::flags::{Evidence, raise};
+use crate::assess::goodness::{FittedCurve, goodness, set_weights};
+use crate::assess::verdict::{decline, peak_rate};
+use crate::assess::{Ceiling, CellResult, CurvePoint, ResponseResult, Severity, Status};
+use crate::curve::{SMOOTHED_HYPERBOLA, SMOOTHED_RAMP};
+use crate::fit::main_fit::{self, MainFit, Scatter};
+use crate::fit::objective::{Chart, Levels, evaluate};
+use crate::fit::solver::Solution;
+use crate::fit::{Estimates, Point, estimates, t_quantile};
+use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_rates};
+use crate::recording::{CellRecording, RecordingSet};
+use crate::settings::Analysis;
+use crate::steps::meet;
+
+/// Fewest steps that a four-parameter curve is fitted to.
+const FEWEST_STEPS: usize = 6;
+/// Fewest distinct drives.
+const FEWEST_LEVELS: usize = 4;
+
+/// Rates and, unless `rates_only`, fits and verdicts of one cell.
+pub fn analyse_cell(cell: &CellRecording, settings: &Analysis, rates_only: bool) -> CellResult {
+    let met = meet(cell);
+    let spans: Vec<(f64, f64, &[f64])> = cell
+        .steps
+        .iter()
+        .zip(&met.of_step)
+        .map(|(step, spikes)| (step.onset_s, step.offset_s, *spikes))
+        .collect();
+    let cell_cv = cell_interval_cv(&met.of_step);
+    let responses = settings
+        .responses
+        .iter()
+        .map(|response| {
+            let rates = step_rates(&spans, *response, cell_cv.cv, settings);
+            let case = Case { cell, spikes: &met.of_step, outside: met.outside, cell_cv, settings };
+            case.response(*response, rates, rates_only)
+        })
+        .collect();
+    CellResult {
+        id: cell.id.clone(),
+        group: cell.group.clone(),
+        drive_kind: cell.drive_kind,
+        carried: cell.carried.clone(),
+        sweep_names: cell.sweeps.iter().map(|s| s.name.clone()).collect(),
+        steps: cell.steps.clone(),
+        spikes_outside: met.outside,
+        responses,
+    }
+}
+
+/// One cell on its way through fit and assessment.
+struct Case<'a> {
+    cell: &'a CellRecording,
+    spikes: &'a [&'a [f64]],
+    outside: usize,
+    cell_cv: CellCv,
+    settings: &'a Analysis,
+}
+
+impl Case<'_> {
+    fn response(&self, response: Response, mut rates: Vec<StepRate>, rates_only: bool) -> ResponseResult {
+        let (settings, steps) = (self.settings, &self.cell.steps);
+        // Steps in order of drive; repeats keep the order of the protocol.
+        let mut order: Vec<usize> = (0..steps.len()).collect();
+        order.sort_by(|a, b| steps[*a].drive.total_cmp(&steps[*b].drive));
+        let mut points: Vec<Point> = order
+            .iter()
+            .map(|i| Point { drive: steps[*i].drive, rate: rates[*i].rate_hz, se: fit_se(&rates[*i]) })
+            .collect();
+        let peak = peak_rate(&points);
+        let with_intervals = rates.iter().filter(|r| r.intervals > 0).count();
+        let declining = decline(&points, settings);
+        if let Some(decline) = &declining {
+            let keep = points.partition_point(|p| p.drive <= decline.peak_drive);
+            points.truncate(keep);
+            order.truncate(keep);
+        }
+        for i in &order {
+            rates[*i].used = true;
+        }
+        let levels = points.chunk_by(|a, b| a.drive == b.drive).count();
+        let spikes = rates.iter().map(|r| r.spikes).sum();
+        let mut result = ResponseResult {
+            response,
+            status: Status::Fitted,
+            reason: String::new(),
+            steps: points.len(),
+            levels,
+            spikes,
+            drive_min: points.first().map(|p| p.drive),
+            drive_max: points.last().map(|p| p.drive),
+            peak_rate_hz: peak,
+            max_rate: Default::default(),
+            half_rise: Default::default(),
+            threshold: Default::default(),
+            noise_sd: Default::default(),
+            initial_gain: Default::default(),
+            reached: None,
+            extra_sd_hz: None,
+            interval_cv: (self.cell_cv.steps > 0).then_some(self.cell_cv.cv),
+            ceiling: None,
+            usable: false,
+            flags: Vec::new(),
+            covariance: None,
+            goodness: Vec::new(),
+            curve: Vec::new(),
+            rates: Vec::new(),
+        };
+        let mut found: Option<(MainFit, Estimates)> = None;
+        if let Some(refusal) = &self.cell.refusal {
+            result.status = Status::Refused;
+            result.reason = refusal.sentence.clone();
+        } else if steps.is_empty() {
+            result.status = Status::NoSteps;
+            result.reason = "no protocol step of this cell could be used".into();
+        } else if with_intervals < settings.min_interval_steps {
+            result.status = Status::Silent;
+            result.ceiling = Some(Ceiling::Silent);
+            result.reason = format!(
+                "{with_intervals} steps hold two spikes or more; {} are needed for a curve",
+                settings.min_interval_steps
+            );
+        } else if points.len() < FEWEST_STEPS || levels < FEWEST_LEVELS {
+            result.status = Status::TooFewLevels;
+            result.reason = format!(
+                "{} steps at {levels} drives{}; a curve of four parameters needs {FEWEST_STEPS} steps at \
+                 {FEWEST_LEVELS} drives",
+                points.len(),
+                if declining.is_some() { " up to the peak" } else { "" }
+            );
+        } else if !rates_only {
+            match main_fit::fit(&points, Scatter::Estimated) {
+                Some(mut fit) => {
+                    let estimates = estimates(&points, Scatter::Estimated, &mut fit, settings.profiles);
+                    self.take_fit(&mut result, &points, &order, &mut rates, &fit, &estimates);
+                    found = Some((fit, estimates));
+                }
+                None => {
+                    result.status = Status::Silent;
+                    result.ceiling = Some(Ceiling::Silent);
+                    result.reason = "no step below the falling part holds a rate".into();
+                }
+            }
+        }
+        if declining.is_some() && matches!(result.status, Status::Fitted | Status::TooFewLevels) {
+            result.ceiling = Some(Ceiling::Declining);
+        }
+        let fitted = result.status == Status::Fitted && found.is_some();
+        if result.status != Status::Fitted {
+            for rate in &mut rates {
+                rate.used = false;
+            }
+        }
+        if !rates_only && !matches!(result.status, Status::Refused | Status::NoSteps) {
+            let evidence = Evidence {
+                response,
+                drive_unit: self.cell.drive_kind.unit(),
+                steps,
+                step_spikes: self.spikes,
+                rates: &rates,
+                spikes_outside: self.outside,
+                cell_cv: self.cell_cv,
+                status: result.status,
+                ceiling: result.ceiling,
+                estimates: found.as_ref().map(|(_, e)| e).filter(|_| fitted),
+                levels,
+                settings,
+            };
+            result.flags = raise(&evidence);
+        }
+        result.usable = fitted
+            && matches!(result.ceiling, Some(Ceiling::Resolved | Ceiling::Loose))
+            && result.flags.iter().all(|f| f.severity != Severity::Reject);
+        result.rates = rates;
+        result
+    }
+
+    fn take_fit(
+        &self,
+        result: &mut ResponseResult,
+        points: &[Point],
+        order: &[usize],
+        rates: &mut [StepRate],
+        fit: &MainFit,
+        estimates: &Estimates,
+    ) {
+        let ramp = main_fit::fit_ramp(points, Scatter::Estimated, fit);
+        result.goodness = vec![
+            measure(SMOOTHED_HYPERBOLA, 4, points, &fit.levels, &fit.solution, fit.extra_variance, fit.converged, fit.evaluations),
+            measure(SMOOTHED_RAMP, 3, points, &ramp.levels, &ramp.solution, ramp.extra_variance, ramp.converged, ramp.evaluations),
+        ];
+        set_weights(&mut result.goodness);
+        if !fit.converged {
+            result.status = Status::NotConverged;
+            result.reason = "the search for the best curve did not settle".into();
+            return;
+        }
+        result.reason = "fitted".into();
+        let e = estimates;
+        (result.max_rate, result.half_rise, result.threshold) = (e.max_rate, e.half_rise, e.threshold);
+        (result.noise_sd, result.initial_gain, result.covariance) = (e.noise_sd, e.initial_gain, e.covariance);
+        result.extra_sd_hz = Some(fit.extra_variance.sqrt());
+        result.ceiling = Some(self.ceiling(fit, e));
+        let fitted = at_points(&fit.solution, &fit.levels);
+        for ((i, point), f) in order.iter().zip(points).zip(&fitted) {
+            rates[*i].fitted_hz = Some(*f);
+            rates[*i].residual_hz = Some(point.rate - f);
+            rates[*i].weight = Some(1.0 / (point.se * point.se + fit.extra_variance));
+        }
+        if let (Some(top), Some(max)) = (fitted.last(), e.max_rate.value) {
+            result.reached = Some(top / max);
+        }
+        result.curve = self.curve(fit);
+    }
+
+    fn ceiling(&self, fit: &MainFit, e: &Estimates) -> Ceiling {
+        if e.ceiling_open || e.max_rate.hi == Some(f64::INFINITY) {
+            return Ceiling::Open;
+        }
+        let ratio = match (e.max_rate.lo, e.max_rate.hi, e.max_rate.value, e.max_rate.se) {
+            (Some(lo), Some(hi), _, _) => hi / lo,
+            // Without profiles: the interval of ln max rate by the delta method.
+            (_, _, Some(max), Some(se)) if !self.settings.profiles => {
+                (2.0 * t_quantile(fit.degrees) * se / max).exp()
+            }
+            // A bound that could not be found is no reason for trust.
+            _ => f64::INFINITY,
+        };
+        if ratio > self.settings.loose_ratio { Ceiling::Loose } else { Ceiling::Resolved }
+    }
+
+    /// The fitted curve and its 95 % band (delta method) on an even grid over all drives of the cell.
+    fn curve(&self, fit: &MainFit) -> Vec<CurvePoint> {
+        let drives = || self.cell.steps.iter().map(|s| s.drive);
+        let lowest = drives().fold(f64::INFINITY, f64::min);
+        let highest = drives().fold(f64::NEG_INFINITY, f64::max);
+        let count = self.settings.curve_points;
+        let grid: Vec<f64> = (0..count)
+            .map(|i| {
+                let part = i as f64 / (count - 1) as f64;
+                lowest * (1.0 - part) + highest * part
+            })
+            .collect();
+        let covariance = fit.covariance();
+        let t = t_quantile(fit.degrees);
+        let mut curve = Vec::with_capacity(count);
+        evaluate(Chart::Ceiling, &fit.solution.parameters, &grid, |i, rate, derivatives| {
+            let half = covariance.map(|c| t * spread(&c, derivatives).sqrt());
+            curve.push(CurvePoint {
+                drive: grid[i],
+                rate_hz: rate,
+                lo_hz: half.map(|h| (rate - h).max(0.0)),
+                hi_hz: half.map(|h| rate + h),
+            });
+        });
+        curve
+    }
+}
+
+/// d' C d, never below zero.
+fn spread(covariance: &[[f64; 4]; 4], derivatives: &[f64; 4]) -> f64 {
+    let mut sum = 0.0;
+    for i in 0..4 {
+        for j in 0..4 {
+            sum += derivatives[i] * covariance[i][j] * derivatives[j];
+        }
+    }
+    sum.max(0.0)
+}
+
+/// Fitted rate of every point, in the order of the points.
+fn at_points(solution: &Solution<4>, levels: &Levels) -> Vec<f64> {
+    let mut at_level = vec![0.0; levels.drives.len()];
+    evaluate(Chart::Ceiling, &solution.parameters, &levels.drives, |i, rate, _| at_level[i] = rate);
+    levels.level_of_point().map(|l| at_level[l]).collect()
+}
+
+#[allow(clippy::too_many_arguments)]
+fn measure(
+    curve: &'static str,
+    parameters: usize,
+    points: &[Point],
+    levels: &Levels,
+    solution: &Solution<4>,
+    extra_variance: f64,
+    converged: bool,
+    evaluations: u64,
+) -> crate::assess::Goodness {
+    let mut held = *solution;
+    if parameters == 3 {
+        held.at_bound[1] = true;
+    }
+    let mut leverage = vec![0.0; levels.drives.len()];
+    let mut fitted = vec![0.0; levels.drives.len()];
+    let covariance = main_fit::covariance(&held);
+    evaluate(Chart::Ceiling, &solution.parameters, &levels.drives, |i, rate, derivatives| {
+        fitted[i] = rate;
+        leverage[i] = covariance.map_or(0.0, |c| spread(&c, derivatives)) * levels.root_weights[i].powi(2);
+    });
+    let spread_out = |values: &[f64]| -> Vec<f64> { levels.level_of_point().map(|l| values[l]).collect() };
+    goodness(&FittedCurve {
+        curve,
+        parameters,
+        points,
+        fitted: &spread_out(&fitted),
+        leverage: &if covariance.is_some() { spread_out(&leverage) } else { Vec::new() },
+        extra_variance,
+        converged,
+        evaluations,
+    })
+}

@@ -29,6 +29,21 @@ pub struct Analysis {
     pub declining_se: f64,
     /// Mean rate on the last level, as a fraction of the peak, below which a cell is `declining` by that alone.
     pub declining_last_fraction: f64,
+    /// Levels below which a cell has too few (flag `few-levels`).
+    pub few_levels: usize,
+    /// Spikes below which a response has too few (flag `few-spikes`).
+    pub few_spikes: usize,
+    /// Interval in seconds below which two spikes may be one (flag `short-interval`).
+    pub short_interval_s: f64,
+    /// Fraction of a cell's spikes outside steps above which it fires on its own (flag `spikes-outside`).
+    pub outside_fraction: f64,
+    /// Steady over onset rate at the largest drive below which adaptation is strong (flag `strong-adaptation`).
+    pub adaptation_fraction: f64,
+    /// Interval CV above which firing is irregular (flag `irregular`).
+    pub irregular_cv: f64,
+    /// Part of a step that may pass in silence after its last spike, as a multiple of the mean interval, before firing
+    /// counts as stopped (flag `stops-early`).
+    pub stop_intervals: f64,
     /// Number of drives in the grid of `curves.parquet`, per cell and response.
     pub curve_points: usize,
 }
@@ -46,6 +61,13 @@ impl Default for Analysis {
             declining_fraction: 0.85,
             declining_se: 3.0,
             declining_last_fraction: 0.5,
+            few_levels: 6,
+            few_spikes: 5,
+            short_interval_s: 0.001,
+            outside_fraction: 0.2,
+            adaptation_fraction: 0.5,
+            irregular_cv: 1.0,
+            stop_intervals: 5.0,
             curve_points: 101,
         }
     }
@@ -105,6 +127,17 @@ impl Analysis {
         }
         if !(self.declining_se > 0.0 && self.declining_se.is_finite()) {
             return err("declining_se", self.declining_se.to_string(), "above 0, finite");
+        }
+        for (key, value) in [
+            ("short_interval_s", self.short_interval_s),
+            ("outside_fraction", self.outside_fraction),
+            ("adaptation_fraction", self.adaptation_fraction),
+            ("irregular_cv", self.irregular_cv),
+            ("stop_intervals", self.stop_intervals),
+        ] {
+            if !(value >= 0.0 && value.is_finite()) {
+                return err(key, value.to_string(), "0 or more, finite");
+            }
         }
         if !(2..=10_001).contains(&self.curve_points) {
             return err("curve_points", self.curve_points.to_string(), "2 to 10001");

@@ -1,5 +1,9 @@
 //! What the fits say about each cell: verdict, goodness of fit, flags.
 
+pub mod flags;
+pub mod goodness;
+pub mod verdict;
+
 use std::sync::Arc;
 
 pub use crate::fit::Estimate;

@@ -4,3 +4,8 @@ pub mod quadrature;
 pub mod smoothed_hyperbola;
 pub mod smoothed_ramp;
 mod vector_exp;
+
+/// Name of the main rate function in the tables.
+pub const SMOOTHED_HYPERBOLA: &str = "smoothed-hyperbola";
+/// Name of the smoothed ramp in the tables.
+pub const SMOOTHED_RAMP: &str = "smoothed-ramp";

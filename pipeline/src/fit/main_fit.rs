@@ -41,6 +41,9 @@ pub struct MainFit {
     pub evaluations: u64,
 }
 
+/// The extra variance has settled once it moves by less than this fraction of the total variance.
+const SETTLED: f64 = 1e-8;
+
 /// How the extra variance is set.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Scatter {
@@ -93,6 +96,45 @@ pub(super) fn refit_from(points: &[Point], scatter: Scatter, fit: &mut MainFit, 
     let levels = std::mem::take(&mut fit.levels);
     let best = search.minimise(&levels, better, &fit.options);
     *fit = search.finish(levels, best, &[fit.solution.parameters], Some(fit.ramp.parameters));
+}
+
+/// The smoothed ramp fitted on its own terms: three parameters and its own extra variance.
+#[derive(Clone, Debug)]
+pub struct RampFit {
+    /// The minimum; the second parameter, 1/max rate, is held at 0.
+    pub solution: Solution<4>,
+    /// Points grouped by drive with the final weights.
+    pub levels: Levels,
+    /// Extra variance, Hz^2.
+    pub extra_variance: f64,
+    /// Whether solver and extra variance converged.
+    pub converged: bool,
+    /// Passes over the levels.
+    pub evaluations: u64,
+}
+
+/// Fits the smoothed ramp to the same points, starting from the ramp that `main` has found at its own weights.
+pub fn fit_ramp(points: &[Point], scatter: Scatter, main: &MainFit) -> RampFit {
+    let mut options = main.options;
+    options.fixed[1] = true;
+    let mut levels = main.levels.clone();
+    let mut solution = main.ramp;
+    let mut search = Search {
+        points,
+        scatter,
+        options,
+        variance: main.extra_variance,
+        evaluations: 0,
+        residuals: Vec::new(),
+    };
+    let converged = search.settle(&mut levels, &mut solution, &options, PARAMETERS - 1);
+    RampFit {
+        solution,
+        levels,
+        extra_variance: search.variance,
+        converged,
+        evaluations: search.evaluations,
+    }
 }
 
 /// Whether two minima differ by more than the solver's tolerance could explain.
@@ -148,7 +190,7 @@ impl Search<'_> {
         let mut converged = false;
         let mut ramp = best;
         for _ in 0..6 {
-            converged = self.settle(&mut levels, &mut best);
+            converged = self.settle(&mut levels, &mut best, &options, PARAMETERS);
             ramp = self.ramp(&levels, &best, ramp_start);
             let mut improved = false;
             for rival in rivals.iter().chain(std::iter::once(&ramp.parameters)) {
@@ -181,29 +223,43 @@ impl Search<'_> {
     }
 
     /// Alternates between the curve at given weights and the extra variance at a given curve until both stand still.
-    fn settle(&mut self, levels: &mut Levels, best: &mut Solution<4>) -> bool {
+    fn settle(
+        &mut self,
+        levels: &mut Levels,
+        best: &mut Solution<4>,
+        options: &SolverOptions<4>,
+        parameters: usize,
+    ) -> bool {
         if let Scatter::Held(_) = self.scatter {
-            *best = self.minimise(levels, best.parameters, &self.options.clone());
+            *best = self.minimise(levels, best.parameters, options);
             return best.converged;
         }
         let standard_errors: Vec<f64> = self.points.iter().map(|p| p.se).collect();
         let interval_variance = standard_errors.iter().map(|e| e * e).sum::<f64>() / self.points.len() as f64;
-        let degrees = (self.points.len() - PARAMETERS) as f64;
+        let degrees = (self.points.len() - parameters) as f64;
+        let mut damped = 1.0;
+        let mut last_change = 0.0_f64;
         for round in 0..200 {
             // Early rounds need no more than a good direction; the last ones are exact.
-            let options = SolverOptions {
+            let limited = SolverOptions {
                 initial_damping: if round == 0 { 1e-4 } else { 1e-7 },
-                max_iterations: if round < 3 { 3 } else { self.options.max_iterations },
-                ..self.options
+                max_iterations: if round < 3 { 3 } else { options.max_iterations },
+                ..*options
             };
-            *best = self.minimise(levels, best.parameters, &options);
+            *best = self.minimise(levels, best.parameters, &limited);
             self.set_residuals(levels, best);
-            let variance = extra_variance(&self.residuals, &standard_errors, degrees);
-            let change = (variance - self.variance).abs();
-            self.variance = variance;
-            levels.reweigh(self.points, variance);
-            if change <= 1e-9 * (variance + interval_variance) {
-                *best = self.minimise(levels, best.parameters, &SolverOptions { initial_damping: 1e-7, ..self.options });
+            let target = extra_variance(&self.residuals, &standard_errors, degrees);
+            let change = target - self.variance;
+            // A minimum that hops to and fro with the weights is brought to rest by shorter steps.
+            if change * last_change < 0.0 && change.abs() > 0.5 * last_change.abs() {
+                damped *= 0.5;
+            }
+            last_change = change;
+            self.variance += damped * change;
+            levels.reweigh(self.points, self.variance);
+            if change.abs() <= SETTLED * (target + interval_variance) {
+                let exact = SolverOptions { initial_damping: 1e-7, ..*options };
+                *best = self.minimise(levels, best.parameters, &exact);
                 return best.converged;
             }
         }

@@ -6,7 +6,7 @@ mod windows;
 use serde::{Deserialize, Serialize};
 
 pub use intervals::{cv, cv2, detrended_cv, interval_rate, lv, lvr};
-pub use windows::{CellCv, cell_interval_cv, step_rates};
+pub use windows::{CellCv, cell_interval_cv, fit_se, step_rates};
 
 /// The part of a step that a rate describes.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, PartialOrd, Ord, Serialize, Deserialize)]
