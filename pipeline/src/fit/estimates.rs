@@ -217,6 +217,7 @@ fn in_half_rise_chart(fit: &MainFit, objective: &Objective<'_>) -> (Solution<4>,
     let (lowest, highest) = (fit.levels.drives.first(), fit.levels.drives.last());
     let range = highest.zip(lowest).map_or(1.0, |(high, low)| high - low);
     options.upper[1] = (1e3 / range).max(best.parameters[1]);
+    options.stride[1] = 2.0 / range;
     best.at_bound[1] = best.parameters[1] <= 0.0;
     (best, options)
 }

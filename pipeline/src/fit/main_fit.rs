@@ -163,6 +163,7 @@ fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
         max_iterations: 400,
+        stride: [1.0, 0.5 / peak, 0.25 * range, 1.0],
         ..SolverOptions::default()
     }
 }

@@ -19,7 +19,7 @@ pub enum Side<const P: usize> {
 }
 
 /// The profile meets its limit when the square root of the rise is this close to the root of the limit, relatively.
-const TOLERANCE: f64 = 1e-6;
+const TOLERANCE: f64 = 1e-5;
 
 /// Follows the profile of parameter `index` from the minimum `best` downwards (`direction` < 0) or upwards, to where
 /// the cost has risen by `limit`. Bounds are those of `options`; `evaluations` counts passes over the points.
@@ -40,7 +40,8 @@ pub fn profile_side<const P: usize, L: LeastSquares<P>>(
     let root_limit = limit.sqrt();
     let mut held = *options;
     held.fixed[index] = true;
-    held.decrease_tolerance = options.decrease_tolerance.max(1e-8);
+    held.decrease_tolerance = options.decrease_tolerance.max(1e-7);
+    held.max_iterations = options.max_iterations.min(60);
     held.initial_damping = 1e-6;
     let Some(scale) = standard_deviation(best, index) else {
         return Side::Lost;
@@ -53,10 +54,9 @@ pub fn profile_side<const P: usize, L: LeastSquares<P>>(
     // The square root of the rise is nearly a straight line in the parameter: Newton on it, inside a bracket.
     let (mut inside, mut outside) = (start, f64::NAN);
     let mut at = *best;
-    // Where the quadratic guess lies beyond the wall, most often the profile never closes: ask at the wall first.
-    let mut next = start + direction * scale * root_limit;
+    let mut next = start + direction * (scale * root_limit).min(options.stride[index]);
     for _ in 0..60 {
-        if (next - wall) * direction >= 0.0 {
+            if (next - wall) * direction >= 0.0 {
             next = wall;
         }
         let trial = carry(&at, index, next, options);
@@ -78,10 +78,11 @@ pub fn profile_side<const P: usize, L: LeastSquares<P>>(
                 return Side::Open;
             }
             inside = next;
+            // The valley is followed from inside: a point beyond the limit may lie in another one.
+            at = found;
         } else {
             outside = next;
         }
-        at = found;
         // d(cost)/d(parameter) of the profile is the partial derivative at its optimum.
         let slope = -found.sums.gradient[index] / root.max(f64::MIN_POSITIVE);
         let newton = next + (root_limit - root) / slope;
@@ -117,7 +118,10 @@ enum Direct<const P: usize> {
 }
 
 /// Iterations granted to the direct search; it settles in four to seven or not at all.
-const DIRECT_ITERATIONS: usize = 12;
+const DIRECT_ITERATIONS: usize = 16;
+
+/// Longest step, as a multiple of the first.
+const REACH: f64 = 1.5;
 
 /// Newton's method for the end of the interval and the other parameters together (Venzon & Moolgavkar 1988): one
 /// pass over the points a step instead of a minimisation, but it may fail where the valley bends.
@@ -175,39 +179,53 @@ fn direct<const P: usize, L: LeastSquares<P>>(
         // The profile's quadratic model: cost - gain - 2 gradient d + curvature d^2 = target.
         let excess = sums.cost - gain - target;
         let root = gradient * gradient - curvature * excess;
-        if !(curvature > 0.0 && root >= 0.0) {
+        if !(curvature > 0.0) {
             return Direct::Unsettled;
         }
-        let step = (gradient + direction * root.sqrt()) / curvature;
+        // A model that never comes down to the target asks for its own minimum.
+        let mut step = (gradient + direction * root.max(0.0).sqrt()) / curvature;
         if iteration == 0 {
-            reach = 3.0 * step.abs();
+            reach = REACH * step.abs();
         }
-        if !(step.abs() <= reach) {
-            return Direct::Unsettled;
-        }
+        step = step.clamp(-reach, reach);
         let settled = iteration > 0
             && (sums.cost - target).abs() <= DIRECT_TOLERANCE * limit
             && gain <= DIRECT_TOLERANCE * limit;
-        at[index] += step;
         if settled {
-            return Direct::Closed(at[index]);
+            return Direct::Closed(at[index] + step);
         }
-        if !((at[index] - best.parameters[index]) * direction > 0.0
-            && at[index] > options.lower[index]
-            && at[index] < options.upper[index])
-        {
-            return Direct::Unsettled;
-        }
+        let before = (at, sums);
+        let mut moves = [0.0; P];
         for i in 0..P {
             if free[i] {
-                at[i] = (at[i] + shift[i] - slope[i] * step).max(options.lower[i]).min(options.upper[i]);
+                moves[i] = shift[i] - slope[i] * step;
             }
         }
-        sums = NormalSums::default();
-        problem.accumulate(&at, &mut sums);
-        *evaluations += 1;
-        if !(sums.cost < best.cost() + 50.0 * limit) {
-            return Direct::Unsettled;
+        moves[index] = step;
+        let mut part = 1.0_f64;
+        for i in 0..P {
+            part = part.min(options.stride[i] / moves[i].abs());
+        }
+        let least = 0.02 * part;
+        loop {
+            at = std::array::from_fn(|i| {
+                (before.0[i] + part * moves[i]).max(options.lower[i]).min(options.upper[i])
+            });
+            let inside = (at[index] - best.parameters[index]) * direction > 0.0
+                && at[index] > options.lower[index]
+                && at[index] < options.upper[index];
+            if inside {
+                sums = NormalSums::default();
+                problem.accumulate(&at, &mut sums);
+                *evaluations += 1;
+                if sums.cost < best.cost() + 20.0 * limit {
+                    break;
+                }
+            }
+            part *= 0.4;
+            if !(part >= least) {
+                return Direct::Unsettled;
+            }
         }
         if sums.cost < best.cost() * (1.0 - 1e-7) - 1e-12 {
             return Direct::Better(at);

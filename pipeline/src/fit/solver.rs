@@ -85,6 +85,8 @@ pub struct SolverOptions<const P: usize> {
     pub step_tolerance: f64,
     /// Iterations after which the solver gives up.
     pub max_iterations: u64,
+    /// Longest step of a profile in each parameter, where curvature alone would leap further than it can be trusted.
+    pub stride: [f64; P],
     /// First damping, as a fraction of the largest curvature.
     pub initial_damping: f64,
 }
@@ -98,6 +100,7 @@ impl<const P: usize> Default for SolverOptions<P> {
             decrease_tolerance: 1e-22,
             step_tolerance: 1e-14,
             max_iterations: 2000,
+            stride: [f64::INFINITY; P],
             initial_damping: 1e-3,
         }
     }
@@ -157,9 +160,7 @@ impl<const P: usize> LevenbergMarquardt<P> {
     fn rescale(&mut self) {
         for i in 0..P {
             let norm = self.sums.curvature[i][i].sqrt();
-            if norm > self.scale[i] {
-                self.scale[i] = norm;
-            }
+            self.scale[i] = norm.max(self.scale[i]);
         }
     }
 
