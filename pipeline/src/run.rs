@@ -18,7 +18,8 @@ use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_ra
 use crate::recording::{CellRecording, DriveKind, ReadError, ReadOptions, RecordingSet, read};
 use crate::settings::{Analysis, SettingsError};
 use crate::steps::meet;
-use crate::summary::{FigureNames, SummaryBuilder, cell_figure};
+use crate::summary::SummaryBuilder;
+use crate::summary::figure::{FigureNames, cell_figure};
 use crate::tables::{
     Counts, Provenance, ResultFolder, TableContext, Tables, WriteError, WrittenTable,
 };
@@ -179,7 +180,9 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
                     return Err(RunError::Interrupted);
                 }
                 let result = analyse_cell(cell, &settings, job.rates_only);
-                if let (Some(name), Some(svg)) = (figure, figure.as_ref().and_then(|_| cell_figure(&result))) {
+                if let Some(name) = figure
+                    && let Some(svg) = cell_figure(&result)
+                {
                     write_text(&cell_figures.join(name), &svg)?;
                 }
                 (job.progress)(Progress::Done(1));

@@ -63,7 +63,7 @@ pub fn fit(points: &[Point], scatter: Scatter) -> Option<MainFit> {
         Scatter::Estimated => (0.05 * peak).powi(2),
         Scatter::Held(variance) => variance,
     };
-    let mut levels = Levels::new(points, first);
+    let levels = Levels::new(points, first);
     if points.len() <= PARAMETERS || levels.drives.len() < PARAMETERS || !(peak > 0.0) {
         return None;
     }
