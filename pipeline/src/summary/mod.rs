@@ -13,6 +13,8 @@ mod numbers;
 mod read_text;
 #[cfg(test)]
 mod test_cells;
+#[cfg(test)]
+mod tests;
 mod text;
 
 pub use builder::SummaryBuilder;
