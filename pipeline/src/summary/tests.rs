@@ -178,7 +178,7 @@ fn the_summary_says_what_was_read_refused_found_and_how() {
     let set = set("demo", &cells);
     let (markdown, overview) = build(&set, &cells, &Analysis::default());
     for part in [
-        "5 cells in 1 group, 5 under current steps (pA); 160 protocol steps and 50 accepted spikes",
+        "5 cells in 1 group, 5 under current steps (pA); 64 protocol steps and 1,232 accepted spikes",
         "| spikes | 1,234 | = | 1,200 | + 32 | + 2 |",
         "| spikes | time-not-a-number | 2 | spikes&#124;a.csv, row 7, cell c&#124;1, spike_time_s = n/a &lt;b&gt;\\\\n |",
         "times are in ms",
@@ -266,7 +266,7 @@ fn figures_say_what_they_cannot_draw() {
     assert!(said(&cell("a", Ceiling::Silent), "at least 3 are needed"));
     assert!(said(
         &cell("a", Ceiling::Resolved),
-        "max rate 120 (113 to 129) Hz"
+        "max rate 120 (113 to 129) Hz, 78 % reached"
     ));
     let mut high = cell("a", Ceiling::Loose);
     high.responses[0].max_rate = super::test_cells::estimate(900.0, 100.0, 200.0);

@@ -177,7 +177,14 @@ impl Overview {
         } else {
             format!("drive ({})", first.panel.unit)
         };
-        canvas.text((left + 0.5 * inner, grid_bottom + 14.0), &drive, axis);
+        canvas.text(
+            (
+                left + 0.5 * cell_width * columns.min(self.drawn.len()) as f64,
+                grid_bottom + 14.0,
+            ),
+            &drive,
+            axis,
+        );
         canvas.rotated_text(
             (EDGE + 11.0, 0.5 * (TITLE + grid_bottom)),
             "rate (Hz)",
