@@ -1,7 +1,6 @@
 //! How the figures of a run were made: settings, methods in a few sentences, references.
 
-use super::numbers::significant_text;
-use super::text::{id_markdown, sentence_markdown, table_head, table_row};
+use super::text::{sentence_markdown, table_head, table_row};
 use crate::settings::Analysis;
 
 /// Every setting with the value used.
@@ -30,7 +29,8 @@ pub(super) fn settings_section(settings: &Analysis) -> String {
 
 /// The methods in a few sentences.
 pub(super) fn methods_section(settings: &Analysis) -> String {
-    let percent = |fraction: f64| id_markdown(&format!("{} %", significant_text(100.0 * fraction)));
+    // Rounded so that 0.07 is not 7.000000000000001 %.
+    let percent = |fraction: f64| format!("{} %", (1e6 * fraction).round() / 1e4);
     let intervals = if settings.profiles {
         "Intervals are 95 % profile likelihood intervals: all values of a parameter that, with the others fitted anew, \
          raise the deviance by no more than F(0.95; 1, steps - 4) (Bates & Watts 1988; Venzon & Moolgavkar 1988). They \
@@ -69,12 +69,12 @@ pub(super) fn methods_section(settings: &Analysis) -> String {
          closed, but the upper bound is more than {ratio} times the lower. `resolved`: otherwise. A cell is usable \
          when it is fitted, `resolved` or `loose`, and no flag rejects it.\n\n",
         steady = percent(settings.steady_fraction),
-        refractory = significant_text(settings.lvr_refractory_s),
+        refractory = settings.lvr_refractory_s,
         silent = settings.min_interval_steps,
         fraction = percent(settings.declining_fraction),
-        se = significant_text(settings.declining_se),
+        se = settings.declining_se,
         last = percent(settings.declining_last_fraction),
-        ratio = significant_text(settings.loose_ratio),
+        ratio = settings.loose_ratio,
     )
 }
 

@@ -109,6 +109,9 @@ impl Overview {
                 marks.push(Mark::Verdict(verdict));
             }
         }
+        if self.drawn.iter().any(|d| d.panel.has_curve()) {
+            marks.push(Mark::Band);
+        }
         if self.drawn.iter().any(|d| d.panel.has_threshold()) {
             marks.push(Mark::Threshold);
         }
