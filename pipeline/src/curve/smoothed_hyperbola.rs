@@ -163,9 +163,9 @@ fn noise_free(z: f64) -> Smoothed {
 /// Rules of the fast evaluation, fetched once a fit.
 #[derive(Debug)]
 struct FastRules {
-    below: Rule<32>,
+    below: Rule<40>,
     above: Rule<48>,
-    broad: Rule<72>,
+    broad: Rule<80>,
     hermite_8: Rule<8>,
     hermite_16: Rule<16>,
     hermite_24: Rule<24>,
@@ -185,7 +185,7 @@ const LANES: usize = 8;
 
 /// The curve at one fixed `s`, for many `z`: what a pass of the fit evaluates.
 ///
-/// Keeps 1e-11 relative to the referee for s from 0 to 1e3 and z/s from -37 up. Call it inside
+/// Keeps 1e-11 relative to the referee for s up to 50 and z/s from -37 up, 1e-8 beyond. Call it inside
 /// [`vectorised`], where the compiler may use the machine's widest vectors.
 #[derive(Clone, Copy, Debug)]
 pub struct Kernel {
@@ -226,13 +226,13 @@ impl Kernel {
             (1.0, sums)
         } else {
             let sums = if z <= 0.0 {
-                let reach = 56.0 * s * s;
+                let reach = 60.0 * s * s;
                 let top = reach / (-z + (z * z + reach).sqrt());
-                self.near(&self.rules.below, z, top)
+                if s <= 20.0 { self.near(&self.rules.below, z, top) } else { self.near(&self.rules.broad, z, top) }
             } else if s <= 0.5 {
-                self.near(&self.rules.above, z, z + 7.4 * s)
+                self.near(&self.rules.above, z, z + 7.6 * s)
             } else {
-                self.near(&self.rules.broad, z, z + 7.4 * s)
+                self.near(&self.rules.broad, z, z + 7.6 * s)
             };
             (self.p0_scale * vector_exp::exp(-0.5 * w * w), sums)
         };
