@@ -197,6 +197,35 @@ impl<const P: usize> LevenbergMarquardt<P> {
         }
         Some(step)
     }
+
+    /// An undamped step from where the cost no longer tells better from worse: it is flat to rounding around its
+    /// minimum, over some 1e-8 of the parameters, while the gradient still points. Accepted if the step after it
+    /// promises a quarter or less, and the cost is the same to rounding.
+    fn polish<L: LeastSquares<P>>(
+        &mut self,
+        problem: &mut Problem<L>,
+        x: &[f64; P],
+        free: &[bool; P],
+    ) -> Result<Option<([f64; P], NormalSums<P>)>, Error> {
+        let Some(step) = self.step(free, 0.0) else {
+            return Ok(None);
+        };
+        let o = &self.options;
+        let trial: [f64; P] = std::array::from_fn(|i| {
+            if free[i] { (x[i] + step[i]).clamp(o.lower[i], o.upper[i]) } else { x[i] }
+        });
+        let promise = dot(&step, &self.sums.gradient);
+        let cost = self.sums.cost;
+        let before = self.sums;
+        let sums = self.evaluate(problem, &trial)?;
+        if !(sums.is_finite() && sums.cost <= cost * (1.0 + ROUNDING_FLOOR)) {
+            return Ok(None);
+        }
+        self.sums = sums;
+        let next = self.step(free, 0.0).map(|step| dot(&step, &sums.gradient));
+        self.sums = before;
+        Ok(next.is_some_and(|next| next <= 0.25 * promise).then_some((trial, sums)))
+    }
 }
 
 /// Cholesky factor of the lower triangle `a`; `None` unless positive definite.
@@ -337,7 +366,13 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
                 && predicted.abs() <= ROUNDING_FLOOR * cost
                 && promise.is_some_and(|p| p <= ROUNDING_FLOOR.sqrt() * cost)
             {
-                return stop(self, state, true);
+                return match self.polish(problem, &x, &free)? {
+                    Some((polished, sums)) => {
+                        self.sums = sums;
+                        Ok((state.param(polished).cost(sums.cost), None))
+                    }
+                    None => stop(self, state, true),
+                };
             }
             self.damping *= self.growth;
             self.growth *= 2.0;
