@@ -21,7 +21,11 @@ pub struct NormalSums<const P: usize> {
 
 impl<const P: usize> Default for NormalSums<P> {
     fn default() -> Self {
-        Self { cost: 0.0, gradient: [0.0; P], curvature: [[0.0; P]; P] }
+        Self {
+            cost: 0.0,
+            gradient: [0.0; P],
+            curvature: [[0.0; P]; P],
+        }
     }
 }
 
@@ -212,7 +216,11 @@ impl<const P: usize> LevenbergMarquardt<P> {
         };
         let o = &self.options;
         let trial: [f64; P] = std::array::from_fn(|i| {
-            if free[i] { (x[i] + step[i]).clamp(o.lower[i], o.upper[i]) } else { x[i] }
+            if free[i] {
+                (x[i] + step[i]).clamp(o.lower[i], o.upper[i])
+            } else {
+                x[i]
+            }
         });
         let promise = dot(&step, &self.sums.gradient);
         let cost = self.sums.cost;
@@ -224,7 +232,9 @@ impl<const P: usize> LevenbergMarquardt<P> {
         self.sums = sums;
         let next = self.step(free, 0.0).map(|step| dot(&step, &sums.gradient));
         self.sums = before;
-        Ok(next.is_some_and(|next| next <= 0.25 * promise).then_some((trial, sums)))
+        Ok(next
+            .is_some_and(|next| next <= 0.25 * promise)
+            .then_some((trial, sums)))
     }
 }
 
@@ -295,7 +305,10 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
         if self.sums.is_finite() {
             Ok((state, None))
         } else {
-            Ok((state.terminate_with(TerminationReason::SolverExit("start outside the domain".into())), None))
+            Ok((
+                state.terminate_with(TerminationReason::SolverExit("start outside the domain".into())),
+                None,
+            ))
         }
     }
 
@@ -320,7 +333,9 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
             return stop(self, state, true);
         }
         // What an undamped step promises: the Newton decrement, scale free.
-        let promise = self.step(&free, 0.0).map(|newton| dot(&newton, &self.sums.gradient));
+        let promise = self
+            .step(&free, 0.0)
+            .map(|newton| dot(&newton, &self.sums.gradient));
         if promise.is_some_and(|p| p <= self.options.decrease_tolerance * cost) {
             return stop(self, state, true);
         }
@@ -335,7 +350,11 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
             };
             let o = &self.options;
             let trial: [f64; P] = std::array::from_fn(|i| {
-                if free[i] { (x[i] + step[i]).clamp(o.lower[i], o.upper[i]) } else { x[i] }
+                if free[i] {
+                    (x[i] + step[i]).clamp(o.lower[i], o.upper[i])
+                } else {
+                    x[i]
+                }
             });
             let moved: [f64; P] = std::array::from_fn(|i| trial[i] - x[i]);
             if (0..P).all(|i| moved[i].abs() <= o.step_tolerance * x[i].abs()) {
@@ -396,7 +415,11 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
     options: &SolverOptions<P>,
 ) -> Solution<P> {
     let start: [f64; P] = std::array::from_fn(|i| {
-        if options.fixed[i] { start[i] } else { start[i].max(options.lower[i]).min(options.upper[i]) }
+        if options.fixed[i] {
+            start[i]
+        } else {
+            start[i].max(options.lower[i]).min(options.upper[i])
+        }
     });
     let solver = LevenbergMarquardt {
         options: *options,
@@ -438,7 +461,10 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
         // The executor itself only fails when the problem or solver returns an error, which neither does.
         Err(_) => Solution {
             parameters: start,
-            sums: NormalSums { cost: f64::INFINITY, ..NormalSums::default() },
+            sums: NormalSums {
+                cost: f64::INFINITY,
+                ..NormalSums::default()
+            },
             converged: false,
             at_bound: [false; P],
             iterations: 0,
