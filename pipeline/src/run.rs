@@ -162,10 +162,9 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     let mut summary = SummaryBuilder::new(&set, &settings);
     let mut names = FigureNames::new();
     let figures = folder.path().join("figures");
-    let cell_figures = figures.join("cells");
     if draw {
-        std::fs::create_dir_all(&cell_figures)
-            .map_err(|e| WriteError::of_io(&cell_figures, "cannot be created", &e))?;
+        std::fs::create_dir_all(&figures)
+            .map_err(|e| WriteError::of_io(&figures, "cannot be created", &e))?;
     }
 
     let mut cells = std::mem::take(&mut set.cells);
@@ -191,7 +190,7 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
                 if let Some(name) = figure
                     && let Some(svg) = cell_figure(&result)
                 {
-                    write_text(&cell_figures.join(name), &svg)?;
+                    write_text(&figures.join(name), &svg)?;
                 }
                 (job.progress)(Progress::Done(1));
                 Ok(result)
@@ -211,7 +210,7 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
         if let Some(svg) = draw.then(|| summary.overview_figure()).flatten() {
             write_text(&figures.join(OVERVIEW_FILE), &svg)?;
         }
-        write_text(&folder.path().join("summary.md"), &summary.finish(&set))?;
+        write_text(&folder.path().join("summary.md"), &summary.finish())?;
     }
     Provenance::new(&set, &settings, counts.clone(), written.clone()).write(folder.path())?;
     if stopped() {

@@ -1,6 +1,7 @@
 //! The smoothed hyperbola against 591 points computed at 30 digits (`fixtures/smoothed_hyperbola`), its limits, and
 //! gradients in physical units.
 
+#![allow(clippy::excessive_precision)]
 use halfrise::curve::hyperbola::hyperbola;
 use halfrise::curve::smoothed_hyperbola::{Kernel, Pass, Slope, Smoothed, evaluate, vectorised};
 use halfrise::curve::smoothed_ramp::ramp;

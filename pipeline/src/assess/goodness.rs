@@ -202,7 +202,7 @@ pub fn runs_p(residuals: &[f64]) -> Option<f64> {
         }
     };
     let probability = |r: u64| -> f64 {
-        if r % 2 == 0 {
+        if r.is_multiple_of(2) {
             let k = r / 2 - 1;
             2.0 * (ways(up - 1, k) + ways(down - 1, k) - all).exp()
         } else {

@@ -10,7 +10,7 @@
 
 use std::f64::consts::{FRAC_1_SQRT_2, PI};
 
-use statrs::function::erf::erfc;
+use libm::erfc;
 
 /// Value and moments of the smoothed ramp at one drive, per unit of gain.
 #[derive(Clone, Copy, Debug, PartialEq)]

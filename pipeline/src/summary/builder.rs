@@ -41,6 +41,8 @@ struct ParameterRow {
 /// Cells are to be added in the order of the set. Memory does not grow with the number of cells.
 pub struct SummaryBuilder {
     settings: Analysis,
+    /// Title to refusals, written while the set still has its cells.
+    opening: String,
     cells: u64,
     verdicts: Vec<(Response, VerdictCounts)>,
     flags: BTreeMap<(Reverse<Severity>, &'static str), u64>,
@@ -52,8 +54,14 @@ pub struct SummaryBuilder {
 impl SummaryBuilder {
     /// A summary of `set` analysed with `settings`, to which no cell has been added yet.
     pub fn new(set: &RecordingSet, settings: &Analysis) -> Self {
+        let mut opening = format!("# Rate functions of {}\n\n", id_markdown(&set.name));
+        opening.push_str(&set_line(set));
+        opening.push('\n');
+        opening.push_str(&what_was_read(set));
+        opening.push_str(&what_was_refused(set));
         Self {
             settings: settings.clone(),
+            opening,
             cells: 0,
             verdicts: settings
                 .responses
@@ -115,13 +123,9 @@ impl SummaryBuilder {
         }
     }
 
-    /// The summary as Markdown. `set` is the set given to [`SummaryBuilder::new`].
-    pub fn finish(self, set: &RecordingSet) -> String {
-        let mut text = format!("# Rate functions of {}\n\n", id_markdown(&set.name));
-        text.push_str(&set_line(set));
-        text.push('\n');
-        text.push_str(&what_was_read(set));
-        text.push_str(&what_was_refused(set));
+    /// The summary as Markdown.
+    pub fn finish(mut self) -> String {
+        let mut text = std::mem::take(&mut self.opening);
         text.push_str(&self.verdict_section());
         if self.settings.figures && !self.overview.is_empty() {
             text.push_str(&format!(

@@ -150,7 +150,9 @@ fn reasons(cell: &CellResult) -> String {
                     .take(i)
                     .flat_map(|r| &r.flags)
                     .any(|f| f.flag == flag.flag);
-                if !known {
+                // The verdict of the first response has already said as much.
+                let said_by_verdict = i == 0 && flag.flag.starts_with("ceiling-");
+                if !known && !said_by_verdict {
                     let place = if i == 0 {
                         String::new()
                     } else {

@@ -55,7 +55,7 @@ fn build(set: &RecordingSet, cells: &[CellResult], settings: &Analysis) -> (Stri
         builder.add(cell, cell_figure(cell).map(|_| file.as_str()));
     }
     let overview = builder.overview_figure();
-    (builder.finish(set), overview)
+    (builder.finish(), overview)
 }
 
 /// All texts of an SVG document; fails where it is not well formed or has a character that XML 1.0 forbids.
@@ -354,7 +354,7 @@ fn without_figures_nothing_is_linked() {
     let mut builder = SummaryBuilder::new(&set, &settings);
     builder.add(&cells[0], None);
     assert_eq!(builder.overview_figure(), None);
-    let markdown = builder.finish(&set);
+    let markdown = builder.finish();
     assert!(!markdown.contains("figures/") && !markdown.contains(OVERVIEW_FILE));
     assert!(markdown.contains("Profile intervals were switched off"));
 }

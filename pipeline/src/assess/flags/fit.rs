@@ -20,7 +20,8 @@ pub(super) fn touched_bound(e: &Evidence<'_>) -> Option<Flag> {
     if at.is_empty() {
         return None;
     }
-    let message = if at.as_slice() == ["noise_sd"] {
+    let noise_only = at.as_slice() == ["noise_sd"];
+    let message = if noise_only {
         "the curve bends at threshold as sharply as the levels can show: the noise SD is too small to be measured".into()
     } else {
         format!(
@@ -28,7 +29,12 @@ pub(super) fn touched_bound(e: &Evidence<'_>) -> Option<Flag> {
             at.join(", ")
         )
     };
-    flag("touched-bound", Severity::Caution, None, None, message)
+    let severity = if noise_only {
+        Severity::Note
+    } else {
+        Severity::Caution
+    };
+    flag("touched-bound", severity, None, None, message)
 }
 
 pub(super) fn ceiling_open(e: &Evidence<'_>) -> Option<Flag> {

@@ -4,7 +4,7 @@ use super::{Evidence, Flag, Severity, flag};
 use crate::rates::RateFrom;
 
 pub(super) fn few_levels(e: &Evidence<'_>) -> Option<Flag> {
-    if e.levels >= e.settings.few_levels || e.steps.is_empty() {
+    if e.levels >= e.settings.few_levels || e.estimates.is_none() {
         return None;
     }
     flag(

@@ -50,7 +50,8 @@ impl Panel {
                     drive,
                     rate: rate.rate_hz,
                     se,
-                    used: rate.used,
+                    // Without a fit there is nothing a step could have been left out of.
+                    used: rate.used || response.status != Status::Fitted,
                 })
             })
             .collect();
