@@ -168,3 +168,30 @@ fn puromycin_profiles_end_where_others_end() {
         }
     }
 }
+
+#[test]
+fn far_above_rheobase_an_integrate_and_fire_cell_is_a_hyperbola() {
+    // 1/(t_ref + tau ln(RI/(RI - D))) with D = threshold - reset: ln((A + D/2)/(A - D/2)) is D/A up to (D/A)^3/12, and
+    // so the rate is a hyperbola with max rate 1/t_ref = 500 Hz, threshold at the middle between rest and firing
+    // threshold, 0.75 nA, and half-rise tau D/(R t_ref) = 7.5 nA (tau 10 ms, R 10 MOhm, D 15 mV, t_ref 2 ms).
+    let points: Vec<Point> = (0..40)
+        .map(|i| {
+            let current = 15.0 * 1.1_f64.powi(i);
+            point(
+                current,
+                1.0 / (0.002 + 0.010 * (10.0 * current / (10.0 * current - 15.0)).ln()),
+            )
+        })
+        .collect();
+    let fit = fit_hyperbola(&points, None).unwrap();
+    println!("{} {} {}", fit.max_rate, fit.half_rise, fit.threshold);
+    assert!(fit.solution.converged);
+    assert_close("max rate", fit.max_rate, 500.0, 1e-4);
+    assert_close("half-rise", fit.half_rise, 7.5, 2e-3);
+    assert_close("threshold", fit.threshold, 0.75, 3e-2);
+    // With the threshold held where theory puts it.
+    let held = fit_hyperbola(&points, Some(0.75)).unwrap();
+    assert_close("max rate", held.max_rate, 500.0, 1e-4);
+    assert_close("half-rise", held.half_rise, 7.5, 1e-3);
+    assert!(held.solution.cost() >= fit.solution.cost());
+}

@@ -391,15 +391,15 @@ fn with_much_noise_it_is_a_step_seen_through_noise() {
     // At z = 0, computed in mpmath.
     for (s, expected) in [
         (50.0, 0.468_131_231_573_787_5),
-        (500.0, 0.494_993_220_973_721_01),
+        (500.0, 0.494_993_220_973_721),
         (5000.0, 0.499_315_781_321_278_8),
-        (50000.0, 0.499_913_207_959_741_47),
+        (50000.0, 0.499_913_207_959_741_5),
     ] {
         assert_close("h", evaluate(0.0, s).h, expected, REFEREE);
     }
     // Where the promise of the fast evaluation ends, and a looser one beyond.
     assert_close("fast", fast(0.0, 50.0).h, 0.468_131_231_573_787_5, FAST);
-    assert_close("fast", fast(0.0, 500.0).h, 0.494_993_220_973_721_01, 1e-8);
+    assert_close("fast", fast(0.0, 500.0).h, 0.494_993_220_973_721, 1e-8);
 }
 
 #[test]

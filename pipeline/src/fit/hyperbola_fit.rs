@@ -185,7 +185,7 @@ pub fn fit_hyperbola(points: &[Point], held_threshold: Option<f64>) -> Option<Hy
         .filter(|d| held_threshold.is_none_or(|t| **d > t))
         .count();
     let peak = points.iter().map(|p| p.rate).fold(0.0, f64::max);
-    if telling < parameters || points.len() <= parameters || !(peak > 0.0) {
+    if telling < parameters || points.len() <= parameters || peak <= 0.0 {
         return None;
     }
     let (lowest, highest) = (*drives.first()?, *drives.last()?);
