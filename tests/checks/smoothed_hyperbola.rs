@@ -14,7 +14,8 @@ const REFEREE: f64 = 1e-13;
 const FAST: f64 = 1e-11;
 /// The same of its part `excess`, the second moment, in which the cut of the tail weighs more.
 const FAST_EXCESS: f64 = 5e-11;
-/// The ramp is as good as its normal integral, whose error is up to 2e-11.
+/// The ramp is as good as its normal integral, whose relative error was measured: 2e-11 around the threshold, 8e-11 at
+/// w = -3.6.
 const RAMP: f64 = 1e-10;
 
 struct Reference {
