@@ -511,7 +511,7 @@ impl Case<'_> {
                 lowest * (1.0 - part) + highest * part
             })
             .collect();
-        let covariance = fit.covariance();
+        let covariance = fit.band_covariance();
         let t = t_quantile(fit.degrees);
         let mut curve = Vec::with_capacity(count);
         evaluate(

@@ -13,10 +13,10 @@ use super::support::{assert_close, csv};
 const REFEREE: f64 = 1e-13;
 const FAST: f64 = 1e-11;
 /// The same of its part `excess`, the second moment, in which the cut of the tail weighs more.
-const FAST_EXCESS: f64 = 5e-11;
-/// The ramp is as good as its normal integral, whose relative error was measured: 2e-11 around the threshold, 8e-11 at
+const FAST_EXCESS: f64 = 1e-11;
+/// The ramp.
 /// w = -3.6.
-const RAMP: f64 = 1e-10;
+const RAMP: f64 = 1e-12;
 
 struct Reference {
     z: f64,

@@ -261,7 +261,7 @@ impl Kernel {
             (1.0, sums)
         } else {
             let sums = if z <= 0.0 {
-                let reach = 60.0 * s * s;
+                let reach = 66.0 * s * s;
                 let top = reach / (-z + (z * z + reach).sqrt());
                 if s <= 20.0 {
                     self.near(&self.rules.below, z, top)

@@ -338,6 +338,18 @@ impl MainFit {
     pub fn covariance(&self) -> Option<[[f64; 4]; 4]> {
         covariance(&self.solution)
     }
+
+    /// The same for the band of the curve: a noise SD that the data do not determine within a factor of e is held,
+    /// since the delta method would carry its meaningless variance to the threshold.
+    pub fn band_covariance(&self) -> Option<[[f64; 4]; 4]> {
+        let full = self.covariance();
+        if full.is_some_and(|c| c[3][3] <= 1.0) {
+            return full;
+        }
+        let mut held = self.solution;
+        held.at_bound[3] = true;
+        covariance(&held)
+    }
 }
 
 /// Inverse of the curvature over the parameters that are not at a bound; rows of the others are zero. `None` unless

@@ -54,9 +54,15 @@ pub(super) fn faster_than_intervals(e: &Evidence<'_>) -> Option<Flag> {
     if max_rate <= limit {
         return None;
     }
+    // A ceiling lies above what was measured; far above, it is an extrapolation beyond what the cell can do.
+    let severity = if max_rate > 2.0 * limit {
+        Severity::Caution
+    } else {
+        Severity::Note
+    };
     flag(
         "faster-than-intervals",
-        Severity::Caution,
+        severity,
         max_rate,
         limit,
         format!(
@@ -85,9 +91,15 @@ pub(super) fn stops_early(e: &Evidence<'_>) -> Option<Flag> {
         .filter(|waited| *waited > e.settings.stop_intervals)
         .collect();
     let longest = steps.iter().copied().max_by(f64::total_cmp)?;
+    let used = e.rates.iter().filter(|r| r.used).count();
+    let severity = if 4 * steps.len() > used {
+        Severity::Reject
+    } else {
+        Severity::Caution
+    };
     flag(
         "stops-early",
-        Severity::Caution,
+        severity,
         longest,
         e.settings.stop_intervals,
         format!(

@@ -52,7 +52,7 @@ pub(super) fn below_half_rise(e: &Evidence<'_>) -> Option<Flag> {
         largest,
         half,
         format!(
-            "no drive reached half of the fitted maximum rate ({half:.4} {} needed)",
+            "no drive reached half of the fitted maximum rate ({half:.1} {} needed)",
             e.drive_unit
         ),
     )
