@@ -1,1 +1,11 @@
-//! Checks.
+//! Checks against the world outside this project, a module a subject. Sources stand beside each and, for the files,
+//! in the README of their folder in `fixtures/`.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
+
+mod integrate_and_fire;
+mod intervals;
+mod meta_analysis;
+mod nist;
+// mod referee;
+mod smoothed_hyperbola;
+mod support;
