@@ -6,6 +6,6 @@ mod integrate_and_fire;
 mod intervals;
 mod meta_analysis;
 mod nist;
-// mod referee;
+mod referee;
 mod smoothed_hyperbola;
 mod support;
