@@ -15,9 +15,222 @@ use crate::fit::objective::{Chart, Levels, evaluate};
 use crate::fit::solver::Solution;
 use crate::fit::{Estimates, Point, estimates, t_quantile};
 use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_rates};
-use crate::recording::{CellRecording, RecordingSet};
-use crate::settings::Analysis;
+use crate::recording::{CellRecording, DriveKind, ReadError, ReadOptions, RecordingSet, read};
+use crate::settings::{Analysis, SettingsError};
 use crate::steps::meet;
+use crate::summary::{FigureNames, SummaryBuilder, cell_figure};
+use crate::tables::{
+    Counts, Provenance, ResultFolder, TableContext, Tables, WriteError, WrittenTable,
+};
+
+/// Cells analysed, written and forgotten together: memory does not grow with the set's results.
+const CELLS_AT_ONCE: usize = 1024;
+
+/// What to do.
+pub struct Job<'a> {
+    /// The recording set's folder.
+    pub set: &'a Path,
+    /// The result folder; `None` for `reports/<name of the set's folder>`.
+    pub out: Option<&'a Path>,
+    /// Replace an existing result folder.
+    pub overwrite: bool,
+    /// Stop after the rates.
+    pub rates_only: bool,
+    /// Changes to the settings after `recording.toml` has been read.
+    pub adjust: &'a dyn Fn(&mut Analysis),
+    /// Once true, the run stops and leaves earlier results as they were.
+    pub cancel: &'a AtomicBool,
+    /// Told of every stage.
+    pub progress: &'a (dyn Fn(Progress) + Sync),
+}
+
+/// How far a run is.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Progress {
+    /// Tables are being read and checked.
+    Reading,
+    /// This many cells will be analysed.
+    Cells(u64),
+    /// This many more cells are done.
+    Done(u64),
+    /// The summary is being written and the folder put in place.
+    Finishing,
+}
+
+/// What a finished run says of itself.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Outcome {
+    /// Where the results are.
+    pub folder: PathBuf,
+    /// The set, without its cells.
+    pub set: SetFacts,
+    /// Counts over cells, verdicts, flags and refused rows.
+    pub counts: Counts,
+    /// Tables written.
+    pub tables: Vec<WrittenTable>,
+    /// Cell and response pairs without a fit.
+    pub unfitted: u64,
+    /// Cell and response pairs with one.
+    pub fitted: u64,
+}
+
+/// Facts about the set that outlive its cells.
+#[derive(Clone, Debug, PartialEq)]
+pub struct SetFacts {
+    /// Its name.
+    pub name: String,
+    /// Row counts: spikes, protocol, cells.
+    pub rows: Vec<(&'static str, crate::recording::RowCounts)>,
+}
+
+impl SetFacts {
+    /// The facts of `set`.
+    pub fn of(set: &RecordingSet) -> Self {
+        let mut rows = vec![("spikes", set.spike_rows), ("protocol", set.protocol_rows)];
+        rows.extend(set.cell_rows.map(|rows| ("cells", rows)));
+        Self { name: set.name.clone(), rows }
+    }
+
+    /// Rows refused in all tables.
+    pub fn refused(&self) -> u64 {
+        self.rows.iter().map(|(_, rows)| rows.refused).sum()
+    }
+}
+
+/// Why a run ended without results.
+#[derive(Debug, thiserror::Error)]
+pub enum RunError {
+    /// The set could not be read.
+    #[error(transparent)]
+    Read(#[from] ReadError),
+    /// A setting is out of range.
+    #[error(transparent)]
+    Settings(#[from] SettingsError),
+    /// The results could not be written; earlier ones are as they were.
+    #[error(transparent)]
+    Write(#[from] WriteError),
+    /// The caller asked to stop.
+    #[error("interrupted\n  earlier results are as they were")]
+    Interrupted,
+}
+
+/// Where results go when the user does not say: `reports/<name of the set's folder>`.
+pub fn default_folder(set: &Path) -> PathBuf {
+    let absolute = std::fs::canonicalize(set).unwrap_or_else(|_| set.to_path_buf());
+    let name = absolute.file_name().map_or_else(|| "set".into(), std::ffi::OsStr::to_os_string);
+    Path::new("reports").join(name)
+}
+
+/// Reads a set, analyses every cell and writes the result folder.
+///
+/// # Errors
+/// The set as a whole cannot be read, a setting is out of range, the results cannot be written, or `cancel` was set.
+/// Cells that cannot be fitted are no error: they have their row with the reason.
+pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
+    let stopped = || job.cancel.load(Ordering::Relaxed);
+    let out = job.out.map_or_else(|| default_folder(job.set), Path::to_path_buf);
+    // A taken folder is said before the work, not after it.
+    let folder = ResultFolder::prepare(&out, job.overwrite)?;
+    (job.progress)(Progress::Reading);
+    let mut set = match read(job.set, &ReadOptions { cancel: Some(job.cancel) }) {
+        Err(ReadError::Interrupted) => return Err(RunError::Interrupted),
+        other => other?,
+    };
+    (job.adjust)(&mut set.analysis);
+    set.analysis.validate()?;
+    let settings = set.analysis.clone();
+    let draw = settings.figures && !job.rates_only;
+
+    let context = TableContext {
+        drive_kinds: set.drive_kinds(),
+        carried_columns: set.carried_columns.clone(),
+        rates_only: job.rates_only,
+    };
+    let mut tables = Tables::create(folder.path(), &context)?;
+    tables.write_refused(&set.refused, &set.inputs)?;
+    let mut counts = Counts::default();
+    counts.add_refused(&set.refused);
+    let mut summary = SummaryBuilder::new(&set, &settings);
+    let mut names = FigureNames::new();
+    let figures = folder.path().join("figures");
+    let cell_figures = figures.join("cells");
+    if draw {
+        std::fs::create_dir_all(&cell_figures)
+            .map_err(|e| WriteError::of_io(&cell_figures, "cannot be created", &e))?;
+    }
+
+    let mut cells = std::mem::take(&mut set.cells);
+    (job.progress)(Progress::Cells(cells.len() as u64));
+    while !cells.is_empty() {
+        if stopped() {
+            return Err(RunError::Interrupted);
+        }
+        let rest = cells.split_off(cells.len().min(CELLS_AT_ONCE));
+        let batch = std::mem::replace(&mut cells, rest);
+        let figure_names: Vec<Option<String>> = batch
+            .iter()
+            .map(|cell| (draw && !cell.steps.is_empty()).then(|| names.name(&cell.id.0)))
+            .collect();
+        let results: Vec<CellResult> = batch
+            .par_iter()
+            .zip(&figure_names)
+            .map(|(cell, figure)| -> Result<CellResult, RunError> {
+                if stopped() {
+                    return Err(RunError::Interrupted);
+                }
+                let result = analyse_cell(cell, &settings, job.rates_only);
+                if let (Some(name), Some(svg)) = (figure, figure.as_ref().and_then(|_| cell_figure(&result))) {
+                    write_text(&cell_figures.join(name), &svg)?;
+                }
+                (job.progress)(Progress::Done(1));
+                Ok(result)
+            })
+            .collect::<Result<_, _>>()?;
+        drop(batch);
+        tables.write(&results)?;
+        counts.add(&results);
+        for (result, figure) in results.iter().zip(&figure_names) {
+            summary.add(result, figure.as_deref());
+        }
+    }
+
+    (job.progress)(Progress::Finishing);
+    let written = tables.finish()?;
+    if !job.rates_only {
+        if let Some(svg) = draw.then(|| summary.overview_figure()).flatten() {
+            write_text(&figures.join("overview.svg"), &svg)?;
+        }
+        write_text(&folder.path().join("summary.md"), &summary.finish(&set))?;
+    }
+    Provenance::new(&set, &settings, counts.clone(), written.clone()).write(folder.path())?;
+    if stopped() {
+        return Err(RunError::Interrupted);
+    }
+    folder.commit()?;
+    let (mut fitted, mut pairs) = (0, 0);
+    for response in counts.responses.values() {
+        fitted += response.status.get(Status::Fitted.name()).copied().unwrap_or(0);
+        pairs += response.status.values().sum::<u64>();
+    }
+    Ok(Outcome {
+        folder: out,
+        set: SetFacts::of(&set),
+        counts,
+        tables: written,
+        unfitted: pairs - fitted,
+        fitted,
+    })
+}
+
+fn write_text(path: &Path, text: &str) -> Result<(), WriteError> {
+    std::fs::write(path, text).map_err(|e| WriteError::of_io(path, "cannot be written", &e))
+}
+
+/// Kinds of drive in words, for messages.
+pub fn drive_words(kinds: &[DriveKind]) -> String {
+    let words: Vec<String> = kinds.iter().map(|k| format!("{} ({})", k.name(), k.unit())).collect();
+    words.join(" and ")
+}
 
 /// Fewest steps that a four-parameter curve is fitted to.
 const FEWEST_STEPS: usize = 6;

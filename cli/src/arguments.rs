@@ -1,0 +1,193 @@
+//! What can be typed.
+
+use std::num::NonZeroUsize;
+use std::path::PathBuf;
+
+use clap::{Args, Parser, Subcommand, ValueEnum};
+use halfrise::rates::Response;
+use halfrise::settings::Analysis;
+
+/// Turns recordings of many neurons under stepped input into rate functions, with intervals and a verdict on each
+/// cell's ceiling.
+#[derive(Debug, Parser)]
+#[command(version, propagate_version = true)]
+pub struct Arguments {
+    /// What to do.
+    #[command(subcommand)]
+    pub command: Command,
+}
+
+/// The commands.
+#[derive(Debug, Subcommand)]
+pub enum Command {
+    /// Read and validate a recording set; say what would be refused and why; write nothing
+    Check(CommonArguments),
+    /// Stop after the rates: steps.parquet and refused.parquet
+    Rates(WorkArguments),
+    /// The whole job: rates, fits, intervals, verdicts, tables, summary and figures
+    Fit(FitArguments),
+}
+
+impl Command {
+    /// The arguments that every command has.
+    pub fn common(&self) -> &CommonArguments {
+        match self {
+            Self::Check(common) => common,
+            Self::Rates(work) => &work.common,
+            Self::Fit(fit) => &fit.work.common,
+        }
+    }
+}
+
+/// Arguments of every command.
+#[derive(Debug, Args)]
+pub struct CommonArguments {
+    /// Folder of the recording set: spikes, protocol, and optionally cells and recording.toml
+    pub set: PathBuf,
+    /// Worker threads [default: one per core]
+    #[arg(long, value_name = "N")]
+    pub threads: Option<NonZeroUsize>,
+    /// No progress and no closing summary; errors are still told
+    #[arg(long, short)]
+    pub quiet: bool,
+    /// End with exit code 3 if a row is refused or a cell cannot be fitted
+    #[arg(long)]
+    pub strict: bool,
+    /// Print the closing summary as one JSON object on standard output
+    #[arg(long)]
+    pub json: bool,
+}
+
+/// Arguments of the commands that write.
+#[derive(Debug, Args)]
+pub struct WorkArguments {
+    /// What every command takes.
+    #[command(flatten)]
+    pub common: CommonArguments,
+    /// Result folder [default: reports/<name of the set's folder>]
+    #[arg(long, value_name = "DIR")]
+    pub out: Option<PathBuf>,
+    /// Replace an existing result folder
+    #[arg(long)]
+    pub overwrite: bool,
+    /// Analysis settings.
+    #[command(flatten)]
+    pub settings: SettingArguments,
+}
+
+/// Arguments of `fit`.
+#[derive(Debug, Args)]
+pub struct FitArguments {
+    /// What `rates` takes as well.
+    #[command(flatten)]
+    pub work: WorkArguments,
+}
+
+/// A response as typed.
+#[derive(Clone, Copy, Debug, ValueEnum)]
+pub enum ResponseName {
+    /// The whole step
+    Whole,
+    /// Its last part
+    Steady,
+    /// The first interval
+    Onset,
+}
+
+/// One flag for every key of `[analysis]`.
+#[derive(Debug, Default, Args)]
+#[command(next_help_heading = "Analysis settings (also keys of [analysis] in recording.toml)")]
+pub struct SettingArguments {
+    /// Responses to analyse, comma separated [default: whole,steady,onset]
+    #[arg(long, value_enum, value_delimiter = ',', value_name = "LIST")]
+    pub responses: Option<Vec<ResponseName>>,
+    /// Last part of a step that counts as steady, as a fraction [default: 0.5]
+    #[arg(long, value_name = "X")]
+    pub steady_fraction: Option<f64>,
+    /// Refractoriness constant of LvR in seconds [default: 0.005]
+    #[arg(long, value_name = "S")]
+    pub lvr_refractory_s: Option<f64>,
+    /// Leave out the profile intervals
+    #[arg(long)]
+    pub no_profiles: bool,
+    /// Draw no figures
+    #[arg(long)]
+    pub no_figures: bool,
+    /// Steps with a rate from intervals below which a response is silent [default: 3]
+    #[arg(long, value_name = "N")]
+    pub min_interval_steps: Option<usize>,
+    /// Upper over lower bound of max rate above which a ceiling is loose [default: 1.5]
+    #[arg(long, value_name = "X")]
+    pub loose_ratio: Option<f64>,
+    /// Fraction of the peak below which rates above the peak level count as fallen [default: 0.85]
+    #[arg(long, value_name = "X")]
+    pub declining_fraction: Option<f64>,
+    /// Standard errors by which they must have fallen, on two levels [default: 3]
+    #[arg(long, value_name = "X")]
+    pub declining_se: Option<f64>,
+    /// Fraction of the peak below which the last level alone shows a decline [default: 0.5]
+    #[arg(long, value_name = "X")]
+    pub declining_last_fraction: Option<f64>,
+    /// Levels below which a cell is flagged few-levels [default: 6]
+    #[arg(long, value_name = "N")]
+    pub few_levels: Option<usize>,
+    /// Spikes below which a response is flagged few-spikes [default: 5]
+    #[arg(long, value_name = "N")]
+    pub few_spikes: Option<usize>,
+    /// Interval in seconds below which short-interval is flagged [default: 0.001]
+    #[arg(long, value_name = "S")]
+    pub short_interval_s: Option<f64>,
+    /// Fraction of spikes outside steps above which spikes-outside is flagged [default: 0.2]
+    #[arg(long, value_name = "X")]
+    pub outside_fraction: Option<f64>,
+    /// Last over first rate in a step below which strong-adaptation is flagged [default: 0.5]
+    #[arg(long, value_name = "X")]
+    pub adaptation_fraction: Option<f64>,
+    /// Interval CV above which irregular is flagged [default: 1]
+    #[arg(long, value_name = "X")]
+    pub irregular_cv: Option<f64>,
+    /// Mean intervals of silence at the end of a step above which stops-early is flagged [default: 5]
+    #[arg(long, value_name = "X")]
+    pub stop_intervals: Option<f64>,
+    /// Drives in the grid of curves.parquet [default: 101]
+    #[arg(long, value_name = "N")]
+    pub curve_points: Option<usize>,
+}
+
+impl SettingArguments {
+    /// Puts what was typed in place of what `recording.toml` or the defaults say.
+    pub fn apply(&self, analysis: &mut Analysis) {
+        fn set<T: Copy>(to: &mut T, from: Option<T>) {
+            if let Some(value) = from {
+                *to = value;
+            }
+        }
+        if let Some(responses) = &self.responses {
+            analysis.responses = responses
+                .iter()
+                .map(|r| match r {
+                    ResponseName::Whole => Response::Whole,
+                    ResponseName::Steady => Response::Steady,
+                    ResponseName::Onset => Response::Onset,
+                })
+                .collect();
+        }
+        analysis.profiles &= !self.no_profiles;
+        analysis.figures &= !self.no_figures;
+        set(&mut analysis.steady_fraction, self.steady_fraction);
+        set(&mut analysis.lvr_refractory_s, self.lvr_refractory_s);
+        set(&mut analysis.min_interval_steps, self.min_interval_steps);
+        set(&mut analysis.loose_ratio, self.loose_ratio);
+        set(&mut analysis.declining_fraction, self.declining_fraction);
+        set(&mut analysis.declining_se, self.declining_se);
+        set(&mut analysis.declining_last_fraction, self.declining_last_fraction);
+        set(&mut analysis.few_levels, self.few_levels);
+        set(&mut analysis.few_spikes, self.few_spikes);
+        set(&mut analysis.short_interval_s, self.short_interval_s);
+        set(&mut analysis.outside_fraction, self.outside_fraction);
+        set(&mut analysis.adaptation_fraction, self.adaptation_fraction);
+        set(&mut analysis.irregular_cv, self.irregular_cv);
+        set(&mut analysis.stop_intervals, self.stop_intervals);
+        set(&mut analysis.curve_points, self.curve_points);
+    }
+}

@@ -1,0 +1,185 @@
+//! The cells to look at before anything else, worst first.
+
+use super::text::{id_markdown, sentence_markdown};
+use crate::assess::{Ceiling, CellResult, Flag, Severity, Status};
+
+/// Most cells listed.
+pub(super) const LISTED: usize = 25;
+/// Most reasons given for one cell.
+const REASONS: usize = 5;
+
+/// How bad a cell is; smaller is worse. The last field is the cell's place, so that the order is total.
+type Rank = (u8, std::cmp::Reverse<usize>, std::cmp::Reverse<usize>, u64);
+
+struct Listed {
+    rank: Rank,
+    cell: String,
+    group: String,
+    reasons: String,
+    figure: Option<String>,
+}
+
+/// Keeps the worst cells of a stream.
+#[derive(Default)]
+pub(super) struct Distrust {
+    listed: Vec<Listed>,
+    /// Cells with a reason to be listed, shown or not.
+    suspects: u64,
+}
+
+/// The sentence said about a verdict, where it is a reason for distrust.
+fn verdict_words(verdict: Option<Ceiling>) -> Option<&'static str> {
+    match verdict? {
+        Ceiling::Declining => Some(
+            "the rate falls at high drive (depolarisation block or failing clamp); steps beyond the peak are left out",
+        ),
+        Ceiling::Open => {
+            Some("no ceiling in sight: max rate and half-rise are not determined, the initial gain is")
+        }
+        Ceiling::Loose => Some("the interval of max rate is wide"),
+        Ceiling::Resolved | Ceiling::Silent => None,
+    }
+}
+
+fn tier(cell: &CellResult, rejects: usize, cautions: usize) -> Option<u8> {
+    let Some(first) = cell.responses.first() else {
+        return Some(1);
+    };
+    let verdict = |wanted| first.ceiling == Some(wanted);
+    Some(match first.status {
+        Status::NotConverged => 0,
+        Status::Refused => 1,
+        Status::TooFewLevels => 2,
+        Status::NoSteps => 3,
+        Status::Silent => 4,
+        Status::Fitted if rejects > 0 => 5,
+        Status::Fitted if verdict(Ceiling::Declining) => 6,
+        Status::Fitted if verdict(Ceiling::Open) => 7,
+        Status::Fitted if cautions > 0 => 8,
+        Status::Fitted if verdict(Ceiling::Loose) => 9,
+        Status::Fitted => return None,
+    })
+}
+
+impl Distrust {
+    /// Looks at the next cell; `place` is its number in the stream.
+    pub(super) fn add(&mut self, cell: &CellResult, figure: Option<&str>, place: u64) {
+        let flags = |severity| {
+            cell.responses
+                .iter()
+                .flat_map(|r| &r.flags)
+                .filter(|flag| flag.severity == severity)
+                .count()
+        };
+        let (rejects, cautions) = (flags(Severity::Reject), flags(Severity::Caution));
+        let Some(tier) = tier(cell, rejects, cautions) else {
+            return;
+        };
+        self.suspects += 1;
+        let rank = (
+            tier,
+            std::cmp::Reverse(rejects),
+            std::cmp::Reverse(cautions),
+            place,
+        );
+        let at = self.listed.partition_point(|listed| listed.rank < rank);
+        if at >= LISTED {
+            return;
+        }
+        self.listed.truncate(LISTED - 1);
+        self.listed.insert(
+            at,
+            Listed {
+                rank,
+                cell: id_markdown(&cell.id.0),
+                group: cell.group.as_deref().map(id_markdown).unwrap_or_default(),
+                reasons: reasons(cell),
+                figure: figure.map(str::to_string),
+            },
+        );
+    }
+
+    /// Number of cells with a reason for distrust.
+    pub(super) fn suspects(&self) -> u64 {
+        self.suspects
+    }
+
+    /// Cell, group, reasons, figure file; worst first.
+    pub(super) fn rows(&self) -> impl Iterator<Item = (&str, &str, &str, Option<&str>)> {
+        self.listed.iter().map(|l| {
+            (
+                l.cell.as_str(),
+                l.group.as_str(),
+                l.reasons.as_str(),
+                l.figure.as_deref(),
+            )
+        })
+    }
+}
+
+/// The reasons in plain words, as Markdown.
+fn reasons(cell: &CellResult) -> String {
+    let mut said: Vec<String> = Vec::new();
+    let mut say = |text: String| {
+        if !text.is_empty() && !said.contains(&text) {
+            said.push(text);
+        }
+    };
+    let Some(first) = cell.responses.first() else {
+        return "no response was analysed".into();
+    };
+    if first.status != Status::Fitted {
+        let reason = sentence_markdown(&first.reason);
+        let status = first.status.name();
+        say(if reason.is_empty() {
+            status.into()
+        } else {
+            format!("**{status}**: {reason}")
+        });
+    } else if let Some(words) = verdict_words(first.ceiling) {
+        let verdict = first.ceiling.map_or("", Ceiling::name);
+        say(format!("**{verdict}**: {words}"));
+    }
+    for severity in [Severity::Reject, Severity::Caution] {
+        for (i, response) in cell.responses.iter().enumerate() {
+            for flag in response.flags.iter().filter(|flag| flag.severity == severity) {
+                // What holds for the first response need not be said again for the others.
+                let known = cell
+                    .responses
+                    .iter()
+                    .take(i)
+                    .flat_map(|r| &r.flags)
+                    .any(|f| f.flag == flag.flag);
+                if !known {
+                    let place = if i == 0 {
+                        String::new()
+                    } else {
+                        format!(" (response {})", response.response.name())
+                    };
+                    say(flag_words(flag, &place));
+                }
+            }
+        }
+    }
+    let more = said.len().saturating_sub(REASONS);
+    said.truncate(REASONS);
+    let mut text = said.join("; ");
+    if more > 0 {
+        text.push_str(&format!("; and {more} more in flags.parquet"));
+    }
+    text
+}
+
+fn flag_words(flag: &Flag, place: &str) -> String {
+    let message = sentence_markdown(flag.message.trim().trim_end_matches('.'));
+    let lead = if flag.severity == Severity::Reject {
+        "**reject** "
+    } else {
+        ""
+    };
+    if message.is_empty() {
+        format!("{lead}{}{place}", sentence_markdown(flag.flag))
+    } else {
+        format!("{lead}{message}{place}")
+    }
+}
