@@ -2,9 +2,10 @@
 //! in the README of their folder in `fixtures/`.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod extra_variance;
+mod hyperbola;
 mod integrate_and_fire;
 mod intervals;
-mod meta_analysis;
 mod nist;
 mod referee;
 mod smoothed_hyperbola;
