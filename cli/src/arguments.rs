@@ -180,7 +180,10 @@ impl SettingArguments {
         set(&mut analysis.loose_ratio, self.loose_ratio);
         set(&mut analysis.declining_fraction, self.declining_fraction);
         set(&mut analysis.declining_se, self.declining_se);
-        set(&mut analysis.declining_last_fraction, self.declining_last_fraction);
+        set(
+            &mut analysis.declining_last_fraction,
+            self.declining_last_fraction,
+        );
         set(&mut analysis.few_levels, self.few_levels);
         set(&mut analysis.few_spikes, self.few_spikes);
         set(&mut analysis.short_interval_s, self.short_interval_s);

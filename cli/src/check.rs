@@ -31,7 +31,10 @@ pub fn check(arguments: &CommonArguments, cancel: &AtomicBool, reporter: &Report
     } else if !arguments.quiet {
         print(&set, refused_cells);
     }
-    let analysable = set.cells.iter().any(|c| c.refusal.is_none() && !c.steps.is_empty());
+    let analysable = set
+        .cells
+        .iter()
+        .any(|c| c.refusal.is_none() && !c.steps.is_empty());
     if !analysable {
         reporter.error("no cell of the set has a usable step\n  see the reasons above");
         exit::BAD_DATA
@@ -56,7 +59,12 @@ fn by_reason(set: &RecordingSet) -> BTreeMap<&'static str, Vec<&halfrise::record
 
 fn print(set: &RecordingSet, refused_cells: usize) {
     let steps: usize = set.cells.iter().map(|c| c.steps.len()).sum();
-    println!("{}: {} cells, {steps} steps, {}", set.name, set.cells.len(), drive_words(&set.drive_kinds()));
+    println!(
+        "{}: {} cells, {steps} steps, {}",
+        set.name,
+        set.cells.len(),
+        drive_words(&set.drive_kinds())
+    );
     for input in &set.inputs {
         let table = input.table.map_or("settings", |t| t.name());
         println!("  {:<9} {:>10} rows  {}", table, input.rows, input.path);
@@ -70,8 +78,15 @@ fn print(set: &RecordingSet, refused_cells: usize) {
     for note in &set.notes {
         println!("note: {note}");
     }
-    for cell in set.cells.iter().filter_map(|c| c.refusal.as_ref().map(|r| (c, r))) {
-        println!("cell {:?} would be refused ({}): {}", &*cell.0.id.0, cell.1.rule, cell.1.sentence);
+    for cell in set
+        .cells
+        .iter()
+        .filter_map(|c| c.refusal.as_ref().map(|r| (c, r)))
+    {
+        println!(
+            "cell {:?} would be refused ({}): {}",
+            &*cell.0.id.0, cell.1.rule, cell.1.sentence
+        );
     }
     for (reason, rows) in by_reason(set) {
         println!("{} rows would be refused: {reason}", rows.len());
@@ -89,9 +104,15 @@ fn print(set: &RecordingSet, refused_cells: usize) {
 }
 
 fn as_json(set: &RecordingSet, refused_cells: usize) -> serde_json::Value {
-    let rows: serde_json::Map<String, serde_json::Value> =
-        SetFacts::of(set).rows.into_iter().map(|(t, r)| (t.to_owned(), json!(r))).collect();
-    let reasons: BTreeMap<_, usize> = by_reason(set).into_iter().map(|(r, rows)| (r, rows.len())).collect();
+    let rows: serde_json::Map<String, serde_json::Value> = SetFacts::of(set)
+        .rows
+        .into_iter()
+        .map(|(t, r)| (t.to_owned(), json!(r)))
+        .collect();
+    let reasons: BTreeMap<_, usize> = by_reason(set)
+        .into_iter()
+        .map(|(r, rows)| (r, rows.len()))
+        .collect();
     json!({
         "command": "check",
         "name": set.name,

@@ -25,9 +25,13 @@ fn work() -> exit::Code {
     let common = arguments.command.common();
     let reporter = Reporter::new(common.quiet);
     if let Some(threads) = common.threads
-        && let Err(error) = rayon::ThreadPoolBuilder::new().num_threads(threads.get()).build_global()
+        && let Err(error) = rayon::ThreadPoolBuilder::new()
+            .num_threads(threads.get())
+            .build_global()
     {
-        reporter.error(&format!("cannot start {threads} threads: {error}\n  ask for fewer with --threads"));
+        reporter.error(&format!(
+            "cannot start {threads} threads: {error}\n  ask for fewer with --threads"
+        ));
         return exit::FAILED;
     }
     // A damaged file can make the table reader panic; that is caught and told as an error of the file.
@@ -82,9 +86,8 @@ fn work_on(work: &WorkArguments, rates_only: bool, cancel: &AtomicBool, reporter
             }
             let refused = outcome.set.refused();
             if !rates_only && outcome.fitted == 0 {
-                reporter.error(
-                    "no cell could be fitted\n  the reasons are in parameters.parquet and summary.md",
-                );
+                reporter
+                    .error("no cell could be fitted\n  the reasons are in parameters.parquet and summary.md");
                 exit::BAD_DATA
             } else if work.common.strict && (refused > 0 || (!rates_only && outcome.unfitted > 0)) {
                 reporter.error(&format!(

@@ -49,7 +49,11 @@ impl Reporter {
 
     /// A progress bar that hides itself off a terminal.
     pub fn progress(&self) -> Bar {
-        if self.quiet { Bar(ProgressBar::hidden()) } else { Bar(ProgressBar::new_spinner()) }
+        if self.quiet {
+            Bar(ProgressBar::hidden())
+        } else {
+            Bar(ProgressBar::new_spinner())
+        }
     }
 
     /// The closing summary, on standard output.
@@ -65,18 +69,30 @@ impl Reporter {
         }
         if !rates_only {
             for (response, counts) in &outcome.counts.responses {
-                let ceiling: Vec<String> =
-                    counts.ceiling.iter().filter(|(_, n)| **n > 0).map(|(name, n)| format!("{n} {name}")).collect();
+                let ceiling: Vec<String> = counts
+                    .ceiling
+                    .iter()
+                    .filter(|(_, n)| **n > 0)
+                    .map(|(name, n)| format!("{n} {name}"))
+                    .collect();
                 println!(
                     "{}: {} cells, {} usable; ceiling {}",
                     response.name(),
                     outcome.counts.cells,
                     counts.usable,
-                    if ceiling.is_empty() { "not judged".into() } else { ceiling.join(", ") }
+                    if ceiling.is_empty() {
+                        "not judged".into()
+                    } else {
+                        ceiling.join(", ")
+                    }
                 );
             }
         }
-        let what = if rates_only { "rates" } else { "read summary.md first; results" };
+        let what = if rates_only {
+            "rates"
+        } else {
+            "read summary.md first; results"
+        };
         println!("{what} in {}", outcome.folder.display());
     }
 }
@@ -108,8 +124,12 @@ impl Bar {
 
 /// The closing summary as JSON.
 pub fn json(outcome: &Outcome, rates_only: bool) -> Value {
-    let rows: serde_json::Map<String, Value> =
-        outcome.set.rows.iter().map(|(table, rows)| ((*table).to_owned(), json!(rows))).collect();
+    let rows: serde_json::Map<String, Value> = outcome
+        .set
+        .rows
+        .iter()
+        .map(|(table, rows)| ((*table).to_owned(), json!(rows)))
+        .collect();
     json!({
         "command": if rates_only { "rates" } else { "fit" },
         "name": outcome.set.name,

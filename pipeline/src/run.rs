@@ -18,10 +18,9 @@ use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_ra
 use crate::recording::{CellRecording, DriveKind, ReadError, ReadOptions, RecordingSet, read};
 use crate::settings::{Analysis, SettingsError};
 use crate::steps::meet;
-use crate::summary::{FigureNames, SummaryBuilder, cell_figure};
-use crate::tables::{
-    Counts, Provenance, ResultFolder, TableContext, Tables, WriteError, WrittenTable,
-};
+use crate::summary::SummaryBuilder;
+use crate::summary::figure::{FigureNames, OVERVIEW_FILE, cell_figure};
+use crate::tables::{Counts, Provenance, ResultFolder, TableContext, Tables, WriteError, WrittenTable};
 
 /// Cells analysed, written and forgotten together: memory does not grow with the set's results.
 const CELLS_AT_ONCE: usize = 1024;
@@ -37,7 +36,7 @@ pub struct Job<'a> {
     /// Stop after the rates.
     pub rates_only: bool,
     /// Changes to the settings after `recording.toml` has been read.
-    pub adjust: &'a dyn Fn(&mut Analysis),
+    pub adjust: &'a (dyn Fn(&mut Analysis) + Sync),
     /// Once true, the run stops and leaves earlier results as they were.
     pub cancel: &'a AtomicBool,
     /// Told of every stage.
@@ -88,7 +87,10 @@ impl SetFacts {
     pub fn of(set: &RecordingSet) -> Self {
         let mut rows = vec![("spikes", set.spike_rows), ("protocol", set.protocol_rows)];
         rows.extend(set.cell_rows.map(|rows| ("cells", rows)));
-        Self { name: set.name.clone(), rows }
+        Self {
+            name: set.name.clone(),
+            rows,
+        }
     }
 
     /// Rows refused in all tables.
@@ -117,7 +119,9 @@ pub enum RunError {
 /// Where results go when the user does not say: `reports/<name of the set's folder>`.
 pub fn default_folder(set: &Path) -> PathBuf {
     let absolute = std::fs::canonicalize(set).unwrap_or_else(|_| set.to_path_buf());
-    let name = absolute.file_name().map_or_else(|| "set".into(), std::ffi::OsStr::to_os_string);
+    let name = absolute
+        .file_name()
+        .map_or_else(|| "set".into(), std::ffi::OsStr::to_os_string);
     Path::new("reports").join(name)
 }
 
@@ -132,7 +136,12 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     // A taken folder is said before the work, not after it.
     let folder = ResultFolder::prepare(&out, job.overwrite)?;
     (job.progress)(Progress::Reading);
-    let mut set = match read(job.set, &ReadOptions { cancel: Some(job.cancel) }) {
+    let mut set = match read(
+        job.set,
+        &ReadOptions {
+            cancel: Some(job.cancel),
+        },
+    ) {
         Err(ReadError::Interrupted) => return Err(RunError::Interrupted),
         other => other?,
     };
@@ -179,7 +188,9 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
                     return Err(RunError::Interrupted);
                 }
                 let result = analyse_cell(cell, &settings, job.rates_only);
-                if let (Some(name), Some(svg)) = (figure, figure.as_ref().and_then(|_| cell_figure(&result))) {
+                if let Some(name) = figure
+                    && let Some(svg) = cell_figure(&result)
+                {
                     write_text(&cell_figures.join(name), &svg)?;
                 }
                 (job.progress)(Progress::Done(1));
@@ -198,7 +209,7 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     let written = tables.finish()?;
     if !job.rates_only {
         if let Some(svg) = draw.then(|| summary.overview_figure()).flatten() {
-            write_text(&figures.join("overview.svg"), &svg)?;
+            write_text(&figures.join(OVERVIEW_FILE), &svg)?;
         }
         write_text(&folder.path().join("summary.md"), &summary.finish(&set))?;
     }
@@ -228,7 +239,10 @@ fn write_text(path: &Path, text: &str) -> Result<(), WriteError> {
 
 /// Kinds of drive in words, for messages.
 pub fn drive_words(kinds: &[DriveKind]) -> String {
-    let words: Vec<String> = kinds.iter().map(|k| format!("{} ({})", k.name(), k.unit())).collect();
+    let words: Vec<String> = kinds
+        .iter()
+        .map(|k| format!("{} ({})", k.name(), k.unit()))
+        .collect();
     words.join(" and ")
 }
 
@@ -252,7 +266,13 @@ pub fn analyse_cell(cell: &CellRecording, settings: &Analysis, rates_only: bool)
         .iter()
         .map(|response| {
             let rates = step_rates(&spans, *response, cell_cv.cv, settings);
-            let case = Case { cell, spikes: &met.of_step, outside: met.outside, cell_cv, settings };
+            let case = Case {
+                cell,
+                spikes: &met.of_step,
+                outside: met.outside,
+                cell_cv,
+                settings,
+            };
             case.response(*response, rates, rates_only)
         })
         .collect();
@@ -285,7 +305,11 @@ impl Case<'_> {
         order.sort_by(|a, b| steps[*a].drive.total_cmp(&steps[*b].drive));
         let mut points: Vec<Point> = order
             .iter()
-            .map(|i| Point { drive: steps[*i].drive, rate: rates[*i].rate_hz, se: fit_se(&rates[*i]) })
+            .map(|i| Point {
+                drive: steps[*i].drive,
+                rate: rates[*i].rate_hz,
+                se: fit_se(&rates[*i]),
+            })
             .collect();
         let peak = peak_rate(&points);
         let with_intervals = rates.iter().filter(|r| r.intervals > 0).count();
@@ -346,7 +370,11 @@ impl Case<'_> {
                 "{} steps at {levels} drives{}; a curve of four parameters needs {FEWEST_STEPS} steps at \
                  {FEWEST_LEVELS} drives",
                 points.len(),
-                if declining.is_some() { " up to the peak" } else { "" }
+                if declining.is_some() {
+                    " up to the peak"
+                } else {
+                    ""
+                }
             );
         } else if !rates_only {
             match main_fit::fit(&points, Scatter::Estimated) {
@@ -406,8 +434,26 @@ impl Case<'_> {
     ) {
         let ramp = main_fit::fit_ramp(points, Scatter::Estimated, fit);
         result.goodness = vec![
-            measure(SMOOTHED_HYPERBOLA, 4, points, &fit.levels, &fit.solution, fit.extra_variance, fit.converged, fit.evaluations),
-            measure(SMOOTHED_RAMP, 3, points, &ramp.levels, &ramp.solution, ramp.extra_variance, ramp.converged, ramp.evaluations),
+            measure(
+                SMOOTHED_HYPERBOLA,
+                4,
+                points,
+                &fit.levels,
+                &fit.solution,
+                fit.extra_variance,
+                fit.converged,
+                fit.evaluations,
+            ),
+            measure(
+                SMOOTHED_RAMP,
+                3,
+                points,
+                &ramp.levels,
+                &ramp.solution,
+                ramp.extra_variance,
+                ramp.converged,
+                ramp.evaluations,
+            ),
         ];
         set_weights(&mut result.goodness);
         if !fit.converged {
@@ -418,7 +464,8 @@ impl Case<'_> {
         result.reason = "fitted".into();
         let e = estimates;
         (result.max_rate, result.half_rise, result.threshold) = (e.max_rate, e.half_rise, e.threshold);
-        (result.noise_sd, result.initial_gain, result.covariance) = (e.noise_sd, e.initial_gain, e.covariance);
+        (result.noise_sd, result.initial_gain, result.covariance) =
+            (e.noise_sd, e.initial_gain, e.covariance);
         result.extra_sd_hz = Some(fit.extra_variance.sqrt());
         result.ceiling = Some(self.ceiling(fit, e));
         let fitted = at_points(&fit.solution, &fit.levels);
@@ -446,7 +493,11 @@ impl Case<'_> {
             // A bound that could not be found is no reason for trust.
             _ => f64::INFINITY,
         };
-        if ratio > self.settings.loose_ratio { Ceiling::Loose } else { Ceiling::Resolved }
+        if ratio > self.settings.loose_ratio {
+            Ceiling::Loose
+        } else {
+            Ceiling::Resolved
+        }
     }
 
     /// The fitted curve and its 95 % band (delta method) on an even grid over all drives of the cell.
@@ -464,15 +515,20 @@ impl Case<'_> {
         let covariance = fit.covariance();
         let t = t_quantile(fit.degrees);
         let mut curve = Vec::with_capacity(count);
-        evaluate(Chart::Ceiling, &fit.solution.parameters, &grid, |i, rate, derivatives| {
-            let half = covariance.map(|c| t * spread(&c, derivatives).sqrt());
-            curve.push(CurvePoint {
-                drive: grid[i],
-                rate_hz: rate,
-                lo_hz: half.map(|h| (rate - h).max(0.0)),
-                hi_hz: half.map(|h| rate + h),
-            });
-        });
+        evaluate(
+            Chart::Ceiling,
+            &fit.solution.parameters,
+            &grid,
+            |i, rate, derivatives| {
+                let half = covariance.map(|c| t * spread(&c, derivatives).sqrt());
+                curve.push(CurvePoint {
+                    drive: grid[i],
+                    rate_hz: rate,
+                    lo_hz: half.map(|h| (rate - h).max(0.0)),
+                    hi_hz: half.map(|h| rate + h),
+                });
+            },
+        );
         curve
     }
 }
@@ -491,7 +547,12 @@ fn spread(covariance: &[[f64; 4]; 4], derivatives: &[f64; 4]) -> f64 {
 /// Fitted rate of every point, in the order of the points.
 fn at_points(solution: &Solution<4>, levels: &Levels) -> Vec<f64> {
     let mut at_level = vec![0.0; levels.drives.len()];
-    evaluate(Chart::Ceiling, &solution.parameters, &levels.drives, |i, rate, _| at_level[i] = rate);
+    evaluate(
+        Chart::Ceiling,
+        &solution.parameters,
+        &levels.drives,
+        |i, rate, _| at_level[i] = rate,
+    );
     levels.level_of_point().map(|l| at_level[l]).collect()
 }
 
@@ -513,17 +574,27 @@ fn measure(
     let mut leverage = vec![0.0; levels.drives.len()];
     let mut fitted = vec![0.0; levels.drives.len()];
     let covariance = main_fit::covariance(&held);
-    evaluate(Chart::Ceiling, &solution.parameters, &levels.drives, |i, rate, derivatives| {
-        fitted[i] = rate;
-        leverage[i] = covariance.map_or(0.0, |c| spread(&c, derivatives)) * levels.root_weights[i].powi(2);
-    });
+    evaluate(
+        Chart::Ceiling,
+        &solution.parameters,
+        &levels.drives,
+        |i, rate, derivatives| {
+            fitted[i] = rate;
+            leverage[i] =
+                covariance.map_or(0.0, |c| spread(&c, derivatives)) * levels.root_weights[i].powi(2);
+        },
+    );
     let spread_out = |values: &[f64]| -> Vec<f64> { levels.level_of_point().map(|l| values[l]).collect() };
     goodness(&FittedCurve {
         curve,
         parameters,
         points,
         fitted: &spread_out(&fitted),
-        leverage: &if covariance.is_some() { spread_out(&leverage) } else { Vec::new() },
+        leverage: &if covariance.is_some() {
+            spread_out(&leverage)
+        } else {
+            Vec::new()
+        },
         extra_variance,
         converged,
         evaluations,

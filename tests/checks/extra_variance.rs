@@ -80,6 +80,10 @@ fn the_known_mean_without_extra_variance() {
     let (mean, error) = mean(&effects, &errors, 0.0);
     assert_eq!(format!("{mean:.8} {error:.8}"), "-0.43028516 0.04049875");
     // Cochran's Q = 152.2330 on 12 degrees of freedom.
-    let q: f64 = effects.iter().zip(&errors).map(|(y, e)| ((y - mean) / e).powi(2)).sum();
+    let q: f64 = effects
+        .iter()
+        .zip(&errors)
+        .map(|(y, e)| ((y - mean) / e).powi(2))
+        .sum();
     assert_eq!(format!("{q:.8}"), "152.23300808");
 }

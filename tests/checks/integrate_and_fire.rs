@@ -56,10 +56,14 @@ fn rates_of_noise_free_trains_equal_the_formula() {
     let settings = Analysis::default();
     for (refractory, expected) in [(0.0, without), (0.002, with)] {
         let (onset, offset) = (12.5, 14.0);
-        let trains: Vec<Vec<f64>> =
-            currents.iter().map(|i| train(*i, refractory, onset, offset)).collect();
-        let steps: Vec<(f64, f64, &[f64])> =
-            trains.iter().map(|train| (onset, offset, train.as_slice())).collect();
+        let trains: Vec<Vec<f64>> = currents
+            .iter()
+            .map(|i| train(*i, refractory, onset, offset))
+            .collect();
+        let steps: Vec<(f64, f64, &[f64])> = trains
+            .iter()
+            .map(|train| (onset, offset, train.as_slice()))
+            .collect();
         let cell = cell_interval_cv(&trains.iter().map(Vec::as_slice).collect::<Vec<_>>());
         assert!(cell.cv < 1e-9 && cell.enough && cell.steps == 6);
         for response in [Response::Whole, Response::Steady, Response::Onset] {
@@ -68,7 +72,12 @@ fn rates_of_noise_free_trains_equal_the_formula() {
             for ((rate, current), expected) in rates.iter().zip(currents).zip(expected).skip(1) {
                 assert_close("formula", closed_form(current, refractory), expected, 1e-12);
                 assert_eq!(rate.rate_from, RateFrom::Intervals);
-                assert_close(&format!("{response:?} {current} nA"), rate.rate_hz, expected, 1e-9);
+                assert_close(
+                    &format!("{response:?} {current} nA"),
+                    rate.rate_hz,
+                    expected,
+                    1e-9,
+                );
                 assert!(rate.cv.is_none_or(|cv| cv < 1e-9));
                 assert!(rate.rate_se_hz > 0.0 && rate.rate_se_hz < 0.5);
             }
@@ -87,7 +96,7 @@ const RESET: f64 = 10.0;
 fn scaled_erfc_of_negative(x: f64) -> f64 {
     // Trapezoid over a smooth peak at v = x, or a half peak: Simpson on [0, max(x, 0) + 7].
     let top = x.max(0.0) + 7.0;
-    let panels = 800;
+    let panels = 6400;
     let width = top / f64::from(panels);
     let value = |v: f64| (-v * v + 2.0 * v * x).exp();
     let mut sum = value(0.0) + value(top);
@@ -158,7 +167,7 @@ fn rates_and_cvs_of_noisy_trains_are_siegerts() {
         (25.0, 2.0, 42.849_613_799_210_15, 0.208_308_510_653_129_9),
     ] {
         assert_close("Siegert's integral", siegert(mu, sigma), rate, 1e-9);
-        let spikes = simulate(mu, sigma, 30_000, &mut random);
+        let spikes = simulate(mu, sigma, 120_000, &mut random);
         let found = interval_rate(&spikes).unwrap();
         let intervals: Vec<f64> = spikes.windows(2).map(|w| w[1] - w[0]).collect();
         let n = intervals.len() as f64;
@@ -167,7 +176,13 @@ fn rates_and_cvs_of_noisy_trains_are_siegerts() {
         let found_cv = cv(&intervals).unwrap();
         // Error of a CV by the delta method, central moments from the sample.
         let mean = intervals.iter().sum::<f64>() / n;
-        let moment = |power| intervals.iter().map(|x| (x / mean - 1.0).powi(power)).sum::<f64>() / n;
+        let moment = |power| {
+            intervals
+                .iter()
+                .map(|x| (x / mean - 1.0).powi(power))
+                .sum::<f64>()
+                / n
+        };
         let (m2, m3, m4) = (moment(2), moment(3), moment(4));
         let cv_error = m2.sqrt() * (((m4 / (m2 * m2) - 1.0) / 4.0 - m3 / m2 + m2) / n).sqrt();
         let cv_deviation = (found_cv - interval_cv) / cv_error;
@@ -176,8 +191,14 @@ fn rates_and_cvs_of_noisy_trains_are_siegerts() {
              CV {found_cv:.5} of {interval_cv:.5} ({cv_deviation:+.2} SE)"
         );
         assert!(error < 0.01 * rate && cv_error < 0.02 * interval_cv);
-        assert!(deviation.abs() <= 3.0, "rate {found} against {rate}: {deviation} SE");
-        assert!(cv_deviation.abs() <= 3.0, "CV {found_cv} against {interval_cv}: {cv_deviation} SE");
+        assert!(
+            deviation.abs() <= 3.0,
+            "rate {found} against {rate}: {deviation} SE"
+        );
+        assert!(
+            cv_deviation.abs() <= 3.0,
+            "CV {found_cv} against {interval_cv}: {cv_deviation} SE"
+        );
     }
 }
 
@@ -206,5 +227,8 @@ fn steps_of_noisy_trains_have_honest_errors() {
     let typical = (rates.iter().map(|r| r.rate_se_hz.powi(2)).sum::<f64>() / n).sqrt();
     println!("mean {mean:.3} of {rate:.3}, SD {sd:.3}, standard errors {typical:.3}");
     assert!((mean - rate).abs() < 0.03 * rate, "{mean}");
-    assert!((typical / sd - 1.0).abs() < 0.1, "SD {sd}, standard errors {typical}");
+    assert!(
+        (typical / sd - 1.0).abs() < 0.1,
+        "SD {sd}, standard errors {typical}"
+    );
 }

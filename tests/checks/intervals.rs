@@ -10,7 +10,9 @@
 //!
 //! The standard errors are those of a mean of neighbouring terms that overlap by one interval.
 
-use halfrise::rates::{Response, cell_interval_cv, cv, cv2, detrended_cv, interval_rate, lv, lvr, step_rates};
+use halfrise::rates::{
+    Response, cell_interval_cv, cv, cv2, detrended_cv, interval_rate, lv, lvr, step_rates,
+};
 use halfrise::settings::Analysis;
 use rand::SeedableRng;
 use rand_chacha::ChaCha8Rng;
@@ -27,24 +29,52 @@ fn a_series_worked_by_hand() {
     assert_close("CV", cv(&SERIES).unwrap(), 0.340_515_079_903_09, 1e-12);
     assert_close("CV2", cv2(&SERIES).unwrap(), 0.282_393_732_372_688_5, 1e-12);
     assert_close("LV", lv(&SERIES).unwrap(), 0.075_992_268_874_920_39, 1e-12);
-    assert_close("LvR", lvr(&SERIES, 0.005).unwrap(), 0.121_571_428_254_610_69, 1e-12);
-    let by_hand = [(3.0, 27.0), (4.0, 26.0), (9.0, 31.0), (2.0, 38.0), (7.0, 43.0), (3.0, 47.0), (8.0, 52.0)];
+    assert_close(
+        "LvR",
+        lvr(&SERIES, 0.005).unwrap(),
+        0.121_571_428_254_610_69,
+        1e-12,
+    );
+    let by_hand = [
+        (3.0, 27.0),
+        (4.0, 26.0),
+        (9.0, 31.0),
+        (2.0, 38.0),
+        (7.0, 43.0),
+        (3.0, 47.0),
+        (8.0, 52.0),
+    ];
     let mean = |term: &dyn Fn(f64, f64) -> f64| by_hand.iter().map(|(d, s)| term(*d, *s)).sum::<f64>() / 7.0;
     assert_close("CV2", cv2(&SERIES).unwrap(), mean(&|d, s| 2.0 * d / s), 1e-12);
-    assert_close("LV", lv(&SERIES).unwrap(), mean(&|d, s| 3.0 * d * d / (s * s)), 1e-12);
+    assert_close(
+        "LV",
+        lv(&SERIES).unwrap(),
+        mean(&|d, s| 3.0 * d * d / (s * s)),
+        1e-12,
+    );
 
     let mut spikes = vec![0.5];
     for interval in SERIES {
         spikes.push(spikes[spikes.len() - 1] + interval);
     }
-    assert_close("rate", interval_rate(&spikes).unwrap(), 52.287_581_699_346_404, 1e-12);
+    assert_close(
+        "rate",
+        interval_rate(&spikes).unwrap(),
+        52.287_581_699_346_404,
+        1e-12,
+    );
     // The same through the pipeline's door.
     let settings = Analysis::default();
     let refractory = settings.lvr_refractory_s;
     let step = step_rates(&[(0.45, 0.95, &spikes)], Response::Whole, 0.3, &settings).remove(0);
     assert_eq!((step.spikes, step.intervals), (9, 8));
     assert_close("rate", step.rate_hz, 52.287_581_699_346_404, 1e-12);
-    assert_close("SE", step.rate_se_hz, 52.287_581_699_346_404 * 0.3 / 8.0_f64.sqrt(), 1e-12);
+    assert_close(
+        "SE",
+        step.rate_se_hz,
+        52.287_581_699_346_404 * 0.3 / 8.0_f64.sqrt(),
+        1e-12,
+    );
     assert_close("LvR", step.lvr.unwrap(), lvr(&SERIES, refractory).unwrap(), 1e-11);
     // Last instantaneous rate over the first: 12 ms / 30 ms.
     assert_close("adaptation", step.adaptation_ratio.unwrap(), 0.4, 1e-11);
@@ -54,13 +84,19 @@ fn a_series_worked_by_hand() {
 
 #[test]
 fn detrending_by_the_normal_equations() {
-    // Least squares of the series on 0..7: slope 138.5/42 - written out: sum (i - 3.5)(x - 19.125) = 100.5 over 42.
+    // Least squares of the series in ms on 0..7: the slope is 100.5/42.
     let offsets: Vec<f64> = (0..8).map(|i| f64::from(i) - 3.5).collect();
     let ms: Vec<f64> = SERIES.iter().map(|x| x * 1e3).collect();
     let cross: f64 = offsets.iter().zip(&ms).map(|(o, x)| o * x).sum();
     let total: f64 = ms.iter().map(|x| (x - 19.125).powi(2)).sum();
+    assert_close("cross products", cross, 100.5, 1e-13);
     let residual = total - cross * cross / 42.0;
-    assert_close("detrended", detrended_cv(&SERIES).unwrap(), (residual / 6.0).sqrt() / 19.125, 1e-12);
+    assert_close(
+        "detrended",
+        detrended_cv(&SERIES).unwrap(),
+        (residual / 6.0).sqrt() / 19.125,
+        1e-12,
+    );
 }
 
 struct Shape {
@@ -73,9 +109,16 @@ struct Shape {
     term: [f64; 2],
 }
 
-/// Mean interval 20 ms, R 5 ms. The last column of the first three: published variances of one term.
+/// Mean interval 20 ms, R 5 ms. Figures from the closed forms in mpmath.
 const SHAPES: [Shape; 4] = [
-    Shape { shape: 1.0, cv: 1.0, cv2: 1.0, lv: 1.0, lvr: 2.0, term: [1.0 / 3.0, 0.8] },
+    Shape {
+        shape: 1.0,
+        cv: 1.0,
+        cv2: 1.0,
+        lv: 1.0,
+        lvr: 2.0,
+        term: [1.0 / 3.0, 0.8],
+    },
     Shape {
         shape: 2.0,
         cv: std::f64::consts::FRAC_1_SQRT_2,
@@ -110,7 +153,11 @@ fn mean_and_error(terms: &[f64]) -> (f64, f64) {
     let n = terms.len() as f64;
     let mean = terms.iter().sum::<f64>() / n;
     let variance = terms.iter().map(|t| (t - mean).powi(2)).sum::<f64>() / n;
-    let lagged = terms.windows(2).map(|w| (w[0] - mean) * (w[1] - mean)).sum::<f64>() / n;
+    let lagged = terms
+        .windows(2)
+        .map(|w| (w[0] - mean) * (w[1] - mean))
+        .sum::<f64>()
+        / n;
     (mean, ((variance + 2.0 * lagged) / n).sqrt())
 }
 
@@ -120,13 +167,24 @@ fn within_three(what: &str, value: f64, expected: f64, error: f64) {
     println!("{what}: {value:.6} expected {expected:.6}, {deviation:+.2} SE");
     // A standard error so wide that anything passes is no check.
     assert!(error < 0.02 * expected, "{what}: SE {error}");
-    assert!(deviation.abs() <= 3.0, "{what}: {value} against {expected}, {deviation} SE");
+    assert!(
+        deviation.abs() <= 3.0,
+        "{what}: {value} against {expected}, {deviation} SE"
+    );
 }
 
 #[test]
 fn long_gamma_trains_give_the_closed_forms() {
     let mut random = ChaCha8Rng::seed_from_u64(20_260_101);
-    for Shape { shape, cv: e_cv, cv2: e_cv2, lv: e_lv, lvr: e_lvr, term } in SHAPES {
+    for Shape {
+        shape,
+        cv: e_cv,
+        cv2: e_cv2,
+        lv: e_lv,
+        lvr: e_lvr,
+        term,
+    } in SHAPES
+    {
         let gamma = Gamma::new(shape, MEAN / shape).unwrap();
         let intervals: Vec<f64> = if shape == 1.0 {
             let exponential = Exp::new(1.0 / MEAN).unwrap();
@@ -139,8 +197,18 @@ fn long_gamma_trains_give_the_closed_forms() {
         let (m2, m3, m4) = (shape, 2.0 * shape, 6.0 * shape + 3.0 * shape * shape);
         let variance = m4 / (4.0 * m2 * m2) - 0.25 - m3 / (m2 * shape) + m2 / (shape * shape);
         let cv_error = e_cv * (variance / n).sqrt();
-        within_three(&format!("shape {shape} CV"), cv(&intervals).unwrap(), e_cv, cv_error);
-        within_three(&format!("shape {shape} detrended CV"), detrended_cv(&intervals).unwrap(), e_cv, cv_error);
+        within_three(
+            &format!("shape {shape} CV"),
+            cv(&intervals).unwrap(),
+            e_cv,
+            cv_error,
+        );
+        within_three(
+            &format!("shape {shape} detrended CV"),
+            detrended_cv(&intervals).unwrap(),
+            e_cv,
+            cv_error,
+        );
 
         let pairs = |f: &dyn Fn(f64, f64) -> f64| -> Vec<f64> {
             intervals.windows(2).map(|w| f(w[0], w[1])).collect()
@@ -155,7 +223,12 @@ fn long_gamma_trains_give_the_closed_forms() {
             e_cv2,
             mean_and_error(&cv2_terms).1,
         );
-        within_three(&format!("shape {shape} LV"), lv(&intervals).unwrap(), e_lv, mean_and_error(&lv_terms).1);
+        within_three(
+            &format!("shape {shape} LV"),
+            lv(&intervals).unwrap(),
+            e_lv,
+            mean_and_error(&lv_terms).1,
+        );
         within_three(
             &format!("shape {shape} LvR"),
             lvr(&intervals, 0.005).unwrap(),
@@ -183,7 +256,9 @@ fn a_dead_time_regularises() {
     // Poisson with a dead time of 5 ms, mean 20 ms; expectations by quadrature in mpmath.
     let mut random = ChaCha8Rng::seed_from_u64(5);
     let exponential = Exp::new(1.0 / 0.015).unwrap();
-    let intervals: Vec<f64> = (0..INTERVALS).map(|_| 0.005 + exponential.sample(&mut random)).collect();
+    let intervals: Vec<f64> = (0..INTERVALS)
+        .map(|_| 0.005 + exponential.sample(&mut random))
+        .collect();
     let terms = |f: &dyn Fn(f64, f64) -> f64| -> f64 {
         let terms: Vec<f64> = intervals.windows(2).map(|w| f(w[0], w[1])).collect();
         mean_and_error(&terms).1
@@ -197,7 +272,12 @@ fn a_dead_time_regularises() {
     let error = terms(&|a, b| 3.0 * ((a - b) / (a + b)).powi(2));
     within_three("LV", lv(&intervals).unwrap(), 0.486_806_272_402_712_4, error);
     let error = terms(&|a, b| 3.0 * ((a - b) / (a + b)).powi(2) * (1.0 + 0.02 / (a + b)));
-    within_three("LvR", lvr(&intervals, 0.005).unwrap(), 0.736_509_617_679_834_7, error);
+    within_three(
+        "LvR",
+        lvr(&intervals, 0.005).unwrap(),
+        0.736_509_617_679_834_7,
+        error,
+    );
 }
 
 #[test]
@@ -224,7 +304,12 @@ fn rates_of_short_trains_and_the_cv_behind_their_errors() {
     within_three("mean rate", mean, 51.282_051_3, 8.319_047_2 / n.sqrt());
     // Kurtosis of the sample itself for the error of its SD.
     let fourth = rates.iter().map(|r| (r - mean).powi(4)).sum::<f64>() / n;
-    within_three("SD of the rate", sd, 8.319_047_2, sd * ((fourth / sd.powi(4) - 1.0) / (4.0 * n)).sqrt());
+    within_three(
+        "SD of the rate",
+        sd,
+        8.319_047_2,
+        sd * ((fourth / sd.powi(4) - 1.0) / (4.0 * n)).sqrt(),
+    );
 
     // The cell's CV is the median over its steps, the small-sample bias of a median taken out: close to 1/2, here
     // within 2 % (the correction supposes normal intervals, and gamma intervals of shape 4 are skewed).

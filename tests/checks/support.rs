@@ -4,7 +4,9 @@ use std::path::PathBuf;
 
 /// A file below `fixtures/`.
 pub fn fixture(path: &str) -> PathBuf {
-    PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("../fixtures").join(path)
+    PathBuf::from(env!("CARGO_MANIFEST_DIR"))
+        .join("../fixtures")
+        .join(path)
 }
 
 /// A JSON fixture.
@@ -16,10 +18,15 @@ pub fn json(path: &str) -> serde_json::Value {
 /// A CSV fixture without quotes: header and rows.
 pub fn csv(path: &str) -> (Vec<String>, Vec<Vec<String>>) {
     let text = std::fs::read_to_string(fixture(path)).unwrap_or_else(|e| panic!("{path}: {e}"));
-    let mut lines = text.lines().map(|line| line.split(',').map(str::to_owned).collect::<Vec<_>>());
+    let mut lines = text
+        .lines()
+        .map(|line| line.split(',').map(str::to_owned).collect::<Vec<_>>());
     let header = lines.next().unwrap();
     let rows: Vec<_> = lines.collect();
-    assert!(rows.iter().all(|row| row.len() == header.len()), "{path}: rows of unequal length");
+    assert!(
+        rows.iter().all(|row| row.len() == header.len()),
+        "{path}: rows of unequal length"
+    );
     (header, rows)
 }
 
@@ -27,7 +34,9 @@ pub fn csv(path: &str) -> (Vec<String>, Vec<Vec<String>>) {
 pub fn numbers<const N: usize>(path: &str, columns: [&str; N]) -> Vec<[f64; N]> {
     let (header, rows) = csv(path);
     assert_eq!(header, columns, "{path}");
-    rows.iter().map(|row| std::array::from_fn(|i| row[i].parse().unwrap())).collect()
+    rows.iter()
+        .map(|row| std::array::from_fn(|i| row[i].parse().unwrap()))
+        .collect()
 }
 
 /// Log relative error: the number of digits in which `value` agrees with `certified`, at most 11, the digits that
@@ -44,5 +53,8 @@ pub fn digits(value: f64, certified: f64) -> f64 {
 #[track_caller]
 pub fn assert_close(what: &str, value: f64, expected: f64, tolerance: f64) {
     let error = (value - expected).abs() / expected.abs();
-    assert!(error <= tolerance, "{what}: {value:e} against {expected:e}, relative error {error:e}");
+    assert!(
+        error <= tolerance,
+        "{what}: {value:e} against {expected:e}, relative error {error:e}"
+    );
 }

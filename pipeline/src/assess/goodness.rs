@@ -53,11 +53,20 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
     if !fit.converged || n <= fit.parameters {
         return out;
     }
-    let residuals: Vec<f64> = fit.points.iter().zip(fit.fitted).map(|(p, f)| p.rate - f).collect();
+    let residuals: Vec<f64> = fit
+        .points
+        .iter()
+        .zip(fit.fitted)
+        .map(|(p, f)| p.rate - f)
+        .collect();
     let squares: f64 = residuals.iter().map(|r| r * r).sum();
     let mean = fit.points.iter().map(|p| p.rate).sum::<f64>() / n as f64;
     let total: f64 = fit.points.iter().map(|p| (p.rate - mean).powi(2)).sum();
-    let chi2: f64 = residuals.iter().zip(fit.points).map(|(r, p)| (r / p.se).powi(2)).sum();
+    let chi2: f64 = residuals
+        .iter()
+        .zip(fit.points)
+        .map(|(r, p)| (r / p.se).powi(2))
+        .sum();
     let log_likelihood = log_likelihood(&residuals, fit.points);
     out.log_likelihood = Some(log_likelihood);
     // The extra SD is a parameter as well.
@@ -96,7 +105,11 @@ pub fn log_likelihood(residuals: &[f64], points: &[Point]) -> f64 {
             if high - low <= 1e-12 * high {
                 break;
             }
-            if score(variance) > 0.0 { low = variance } else { high = variance }
+            if score(variance) > 0.0 {
+                low = variance
+            } else {
+                high = variance
+            }
         }
     }
     residuals
@@ -138,7 +151,10 @@ fn lack_of_fit(fit: &FittedCurve<'_>) -> Option<(f64, f64)> {
     let (mut pure, mut about, mut levels) = (0.0, 0.0, 0_usize);
     let mut start = 0;
     while start < fit.points.len() {
-        let count = fit.points[start..].iter().take_while(|p| p.drive == fit.points[start].drive).count();
+        let count = fit.points[start..]
+            .iter()
+            .take_while(|p| p.drive == fit.points[start].drive)
+            .count();
         let (mut weight, mut sum) = (0.0, 0.0);
         for p in &fit.points[start..start + count] {
             let w = 1.0 / (p.se * p.se + fit.extra_variance);
@@ -166,7 +182,11 @@ fn lack_of_fit(fit: &FittedCurve<'_>) -> Option<(f64, f64)> {
 /// Runs test of residual signs in order of drive (Wald & Wolfowitz 1940), exact and two-sided; residuals of zero are
 /// left out. `None` when all have one sign.
 pub fn runs_p(residuals: &[f64]) -> Option<f64> {
-    let signs: Vec<bool> = residuals.iter().filter(|r| **r != 0.0).map(|r| *r > 0.0).collect();
+    let signs: Vec<bool> = residuals
+        .iter()
+        .filter(|r| **r != 0.0)
+        .map(|r| *r > 0.0)
+        .collect();
     let up = signs.iter().filter(|s| **s).count() as u64;
     let down = signs.len() as u64 - up;
     if up == 0 || down == 0 {
@@ -174,7 +194,13 @@ pub fn runs_p(residuals: &[f64]) -> Option<f64> {
     }
     let runs = 1 + signs.windows(2).filter(|w| w[0] != w[1]).count() as u64;
     let all = ln_binomial(up + down, up);
-    let ways = |a: u64, b: u64| if b > a { f64::NEG_INFINITY } else { ln_binomial(a, b) };
+    let ways = |a: u64, b: u64| {
+        if b > a {
+            f64::NEG_INFINITY
+        } else {
+            ln_binomial(a, b)
+        }
+    };
     let probability = |r: u64| -> f64 {
         if r % 2 == 0 {
             let k = r / 2 - 1;
@@ -199,7 +225,10 @@ fn leave_one_level_out(fit: &FittedCurve<'_>, residuals: &[f64]) -> Option<f64> 
     let mut sum = 0.0;
     let mut start = 0;
     while start < residuals.len() {
-        let count = fit.points[start..].iter().take_while(|p| p.drive == fit.points[start].drive).count();
+        let count = fit.points[start..]
+            .iter()
+            .take_while(|p| p.drive == fit.points[start].drive)
+            .count();
         let (mut weight, mut mean) = (0.0, 0.0);
         for i in start..start + count {
             let w = 1.0 / (fit.points[i].se.powi(2) + fit.extra_variance);
@@ -238,7 +267,11 @@ mod tests {
     #[test]
     fn the_likelihood_is_largest_at_its_own_variance() {
         let residuals = [1.0, -2.0, 0.5, 3.0, -1.5];
-        let points = [1e-6; 5].map(|se| Point { drive: 0.0, rate: 0.0, se });
+        let points = [1e-6; 5].map(|se| Point {
+            drive: 0.0,
+            rate: 0.0,
+            se,
+        });
         // Without interval noise the variance is the mean square.
         let v: f64 = residuals.iter().map(|r| r * r).sum::<f64>() / 5.0;
         let exact = -2.5 * ((2.0 * std::f64::consts::PI * v).ln() + 1.0);

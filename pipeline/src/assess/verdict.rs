@@ -22,14 +22,24 @@ fn level_means(points: &[Point]) -> Vec<LevelMean> {
     let mut means: Vec<(LevelMean, f64)> = Vec::new();
     let mut i = 0;
     while i < points.len() {
-        let same = points[i..].iter().take_while(|p| p.drive == points[i].drive).count();
+        let same = points[i..]
+            .iter()
+            .take_while(|p| p.drive == points[i].drive)
+            .count();
         let (mut rate, mut square) = (0.0, 0.0);
         for p in &points[i..i + same] {
             rate += p.rate;
             square += p.se * p.se;
         }
         let count = same as f64;
-        means.push((LevelMean { drive: points[i].drive, rate: rate / count, se: square.sqrt() / count }, count));
+        means.push((
+            LevelMean {
+                drive: points[i].drive,
+                rate: rate / count,
+                se: square.sqrt() / count,
+            },
+            count,
+        ));
         i += same;
     }
     let mut excess: Vec<f64> = means
@@ -43,7 +53,13 @@ fn level_means(points: &[Point]) -> Vec<LevelMean> {
         .collect();
     excess.sort_by(f64::total_cmp);
     let scatter = excess.get(excess.len() / 2).copied().unwrap_or(0.0).max(0.0);
-    means.into_iter().map(|(m, _)| LevelMean { se: (m.se * m.se + scatter).sqrt(), ..m }).collect()
+    means
+        .into_iter()
+        .map(|(m, _)| LevelMean {
+            se: (m.se * m.se + scatter).sqrt(),
+            ..m
+        })
+        .collect()
 }
 
 /// Where the rate peaks before it falls, and how far it falls.
@@ -81,7 +97,10 @@ pub fn decline(points: &[Point], settings: &Analysis) -> Option<Decline> {
         .count();
     let fell = below >= 2 || last.rate < settings.declining_last_fraction * peak.rate;
     let lowest = above.iter().map(|m| m.rate).fold(f64::INFINITY, f64::min);
-    fell.then_some(Decline { peak_drive: peak.drive, fraction: lowest / peak.rate })
+    fell.then_some(Decline {
+        peak_drive: peak.drive,
+        fraction: lowest / peak.rate,
+    })
 }
 
 /// Largest mean rate over the levels of `points` (sorted by drive), Hz.
@@ -95,7 +114,15 @@ mod tests {
     use super::*;
 
     fn points(rates: &[f64], se: f64) -> Vec<Point> {
-        rates.iter().enumerate().map(|(i, r)| Point { drive: 50.0 * i as f64, rate: *r, se }).collect()
+        rates
+            .iter()
+            .enumerate()
+            .map(|(i, r)| Point {
+                drive: 50.0 * i as f64,
+                rate: *r,
+                se,
+            })
+            .collect()
     }
 
     #[test]
@@ -115,7 +142,10 @@ mod tests {
     fn one_low_last_level_is_enough() {
         let settings = Analysis::default();
         assert!(decline(&points(&[0.0, 10.0, 30.0, 45.0, 52.0, 20.0], 1.0), &settings).is_some());
-        assert_eq!(decline(&points(&[0.0, 10.0, 30.0, 45.0, 52.0, 44.0], 1.0), &settings), None);
+        assert_eq!(
+            decline(&points(&[0.0, 10.0, 30.0, 45.0, 52.0, 44.0], 1.0), &settings),
+            None
+        );
         assert_eq!(decline(&points(&[0.0, 0.0], 1.0), &settings), None);
     }
 }

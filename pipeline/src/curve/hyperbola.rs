@@ -30,7 +30,10 @@ pub fn hyperbola(drive: f64, parameters: &[f64; 3]) -> Hyperbola {
     let inverse = 1.0 / (above + half_rise);
     let rate = max_rate * (above * inverse);
     let missing = half_rise * inverse;
-    Hyperbola { rate, derivatives: [rate, -rate * missing, -max_rate * missing * inverse] }
+    Hyperbola {
+        rate,
+        derivatives: [rate, -rate * missing, -max_rate * missing * inverse],
+    }
 }
 
 #[cfg(test)]
@@ -48,7 +51,10 @@ mod tests {
                 up[k] += step;
                 down[k] -= step;
                 let slope = (hyperbola(drive, &up).rate - hyperbola(drive, &down).rate) / (2.0 * step);
-                assert!((slope - at.derivatives[k]).abs() < 1e-6 * at.derivatives[k].abs(), "{drive} {k}");
+                assert!(
+                    (slope - at.derivatives[k]).abs() < 1e-6 * at.derivatives[k].abs(),
+                    "{drive} {k}"
+                );
             }
         }
     }

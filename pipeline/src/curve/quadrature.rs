@@ -14,7 +14,10 @@ pub struct Rule<const N: usize> {
 
 /// Gauss-Legendre on [0, 1]: the weights sum to 1.
 pub fn legendre<const N: usize>() -> Rule<N> {
-    let mut rule = Rule { nodes: [0.0; N], weights: [0.0; N] };
+    let mut rule = Rule {
+        nodes: [0.0; N],
+        weights: [0.0; N],
+    };
     for i in 0..N.div_ceil(2) {
         // Tricomi's first guess; Newton doubles its digits at every turn.
         let mut x = (PI * (i as f64 + 0.75) / (N as f64 + 0.5)).cos();
@@ -45,7 +48,10 @@ fn legendre_polynomial(n: usize, x: f64) -> (f64, f64) {
 
 /// Gauss-Hermite for the standard normal weight: sum w_i g(x_i) ~ E[g(X)], X ~ N(0, 1); the weights sum to 1.
 pub fn hermite<const N: usize>() -> Rule<N> {
-    let mut rule = Rule { nodes: [0.0; N], weights: [0.0; N] };
+    let mut rule = Rule {
+        nodes: [0.0; N],
+        weights: [0.0; N],
+    };
     let bound = (4.0 * N as f64 + 2.0).sqrt();
     // The roots of He_N interlace and are well apart: walk down from the bound and polish every sign change.
     let steps = 400 * N;
@@ -91,10 +97,23 @@ mod tests {
     fn legendre_integrates_polynomials_to_degree_2n_minus_1() {
         let rule = legendre::<24>();
         for power in 0..48 {
-            let sum: f64 = rule.nodes.iter().zip(rule.weights).map(|(x, w)| w * x.powi(power)).sum();
-            assert!((sum * f64::from(power + 1) - 1.0).abs() < 1e-14, "x^{power}: {sum}");
+            let sum: f64 = rule
+                .nodes
+                .iter()
+                .zip(rule.weights)
+                .map(|(x, w)| w * x.powi(power))
+                .sum();
+            assert!(
+                (sum * f64::from(power + 1) - 1.0).abs() < 1e-14,
+                "x^{power}: {sum}"
+            );
         }
-        let sum: f64 = rule.nodes.iter().zip(rule.weights).map(|(x, w)| w * x.powi(48)).sum();
+        let sum: f64 = rule
+            .nodes
+            .iter()
+            .zip(rule.weights)
+            .map(|(x, w)| w * x.powi(48))
+            .sum();
         assert!(sum * 49.0 != 1.0);
     }
 
@@ -103,8 +122,17 @@ mod tests {
         let rule = hermite::<24>();
         let mut moment = 1.0;
         for half in 0..12 {
-            let sum: f64 = rule.nodes.iter().zip(rule.weights).map(|(x, w)| w * x.powi(2 * half)).sum();
-            assert!((sum / moment - 1.0).abs() < 2e-14, "E X^{}: {sum} not {moment}", 2 * half);
+            let sum: f64 = rule
+                .nodes
+                .iter()
+                .zip(rule.weights)
+                .map(|(x, w)| w * x.powi(2 * half))
+                .sum();
+            assert!(
+                (sum / moment - 1.0).abs() < 2e-14,
+                "E X^{}: {sum} not {moment}",
+                2 * half
+            );
             moment *= f64::from(2 * half + 1);
         }
     }

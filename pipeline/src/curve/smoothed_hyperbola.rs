@@ -67,7 +67,14 @@ fn density_at_zero(z: f64, s: f64) -> f64 {
 pub fn evaluate(z: f64, s: f64) -> Smoothed {
     if !(z.is_finite() && s.is_finite() && s >= 0.0) {
         let nan = f64::NAN;
-        return Smoothed { h: nan, dh_dz: nan, dh_ds: nan, d2h_dz2: nan, bend: nan, excess: nan };
+        return Smoothed {
+            h: nan,
+            dh_dz: nan,
+            dh_ds: nan,
+            d2h_dz2: nan,
+            bend: nan,
+            excess: nan,
+        };
     }
     if s == 0.0 {
         return noise_free(z);
@@ -102,11 +109,22 @@ pub fn evaluate(z: f64, s: f64) -> Smoothed {
         }
         let d2h_dz2 = p0 * ((1.0 + top).powi(-2) + 2.0 * bent);
         let [h, dh_dz, bend, excess, _] = sums.map(|sum| p0 * sum);
-        return Smoothed { h, dh_dz, dh_ds: s * d2h_dz2, d2h_dz2, bend, excess };
+        return Smoothed {
+            h,
+            dh_dz,
+            dh_ds: s * d2h_dz2,
+            d2h_dz2,
+            bend,
+            excess,
+        };
     }
     let c = s / (1.0 + z);
     let lowest = -z.ln_1p();
-    let from = if 9.06 * c < 1.0 { lowest.max((-9.06 * c).ln_1p()) } else { lowest };
+    let from = if 9.06 * c < 1.0 {
+        lowest.max((-9.06 * c).ln_1p())
+    } else {
+        lowest
+    };
     let to = (9.06 * c).ln_1p();
     let mut bent = 0.0;
     for (x, weight) in rule.nodes.iter().zip(rule.weights) {
@@ -122,9 +140,19 @@ pub fn evaluate(z: f64, s: f64) -> Smoothed {
     }
     let top = z + 9.06 * s;
     let [h, dh_dz, bend, excess, cubed] = sums;
-    let d2h_dz2 =
-        if w < 3.0 { p0 * ((1.0 + top).powi(-2) + 2.0 * bent) } else { p0 - 2.0 * cubed };
-    Smoothed { h, dh_dz, dh_ds: s * d2h_dz2, d2h_dz2, bend, excess }
+    let d2h_dz2 = if w < 3.0 {
+        p0 * ((1.0 + top).powi(-2) + 2.0 * bent)
+    } else {
+        p0 - 2.0 * cubed
+    };
+    Smoothed {
+        h,
+        dh_dz,
+        dh_ds: s * d2h_dz2,
+        d2h_dz2,
+        bend,
+        excess,
+    }
 }
 
 /// One node's share of the five integrals.
@@ -140,7 +168,14 @@ fn add_node(sums: &mut [f64; 5], u: f64, mass: f64) {
 
 fn finish([h, dh_dz, bend, excess, cubed]: [f64; 5], p0: f64, s: f64) -> Smoothed {
     let d2h_dz2 = p0 - 2.0 * cubed;
-    Smoothed { h, dh_dz, dh_ds: s * d2h_dz2, d2h_dz2, bend, excess }
+    Smoothed {
+        h,
+        dh_dz,
+        dh_ds: s * d2h_dz2,
+        d2h_dz2,
+        bend,
+        excess,
+    }
 }
 
 /// The limit s = 0.
@@ -228,7 +263,11 @@ impl Kernel {
             let sums = if z <= 0.0 {
                 let reach = 60.0 * s * s;
                 let top = reach / (-z + (z * z + reach).sqrt());
-                if s <= 20.0 { self.near(&self.rules.below, z, top) } else { self.near(&self.rules.broad, z, top) }
+                if s <= 20.0 {
+                    self.near(&self.rules.below, z, top)
+                } else {
+                    self.near(&self.rules.broad, z, top)
+                }
             } else if s <= 0.5 {
                 self.near(&self.rules.above, z, z + 7.6 * s)
             } else {
@@ -237,7 +276,13 @@ impl Kernel {
             (self.p0_scale * vector_exp::exp(-0.5 * w * w), sums)
         };
         let (dh_dz, bend, excess) = (factor * dh_dz, factor * bend, factor * excess);
-        Slope { h: bend + excess, dh_dz, bend, excess, dh_dlns: bend - z * dh_dz }
+        Slope {
+            h: bend + excess,
+            dh_dz,
+            bend,
+            excess,
+            dh_dlns: bend - z * dh_dz,
+        }
     }
 
     /// Gauss-Hermite, where the kink is out of the noise's reach.

@@ -33,7 +33,12 @@ pub fn ramp(x: f64, sigma: f64) -> Ramp {
     // Far below the threshold the two terms cancel to rounding noise of either sign; the value itself is positive.
     let value = (x * above + spread).max(0.0);
     let square = ((x * x + sigma * sigma) * above + x * spread).max(0.0);
-    Ramp { value, above, spread, square }
+    Ramp {
+        value,
+        above,
+        spread,
+        square,
+    }
 }
 
 #[cfg(test)]

@@ -106,7 +106,10 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
     let ceiling_open = fit.is_ramp() || rise <= limit;
     let (lower, upper, at) = (&fit.options.lower, &fit.options.upper, fit.solution.parameters);
     let mut at_bound = Vec::new();
-    for (i, name) in ["initial_gain", "max_rate", "threshold", "noise_sd"].into_iter().enumerate() {
+    for (i, name) in ["initial_gain", "max_rate", "threshold", "noise_sd"]
+        .into_iter()
+        .enumerate()
+    {
         // A ceiling at infinity is an answer, not a bound of the search.
         if at[i] >= upper[i] || (at[i] <= lower[i] && i != 1) {
             at_bound.push(name);
@@ -159,16 +162,20 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
         return Ok(estimates);
     }
 
-    let objective = Objective { levels: &fit.levels, chart: Chart::Ceiling };
-    let mut evaluations = 0;
-    let mut side = |problem: &Objective<'_>, best: &Solution<4>, options: &SolverOptions<4>, index, direction| {
-        match profile_side(problem, best, options, index, direction, limit, &mut evaluations) {
-            Side::Closed(value) => Ok(Some(value)),
-            Side::Open => Ok(Some(direction * f64::INFINITY)),
-            Side::Lost => Ok(None),
-            Side::Better(point) => Err(point),
-        }
+    let objective = Objective {
+        levels: &fit.levels,
+        chart: Chart::Ceiling,
     };
+    let mut evaluations = 0;
+    let mut side =
+        |problem: &Objective<'_>, best: &Solution<4>, options: &SolverOptions<4>, index, direction| {
+            match profile_side(problem, best, options, index, direction, limit, &mut evaluations) {
+                Side::Closed(value) => Ok(Some(value)),
+                Side::Open => Ok(Some(direction * f64::INFINITY)),
+                Side::Lost => Ok(None),
+                Side::Better(point) => Err(point),
+            }
+        };
     let (best, options) = (&fit.solution, &fit.options);
     let down = side(&objective, best, options, 0, -1.0)?;
     let up = side(&objective, best, options, 0, 1.0)?;
@@ -190,7 +197,10 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
         side(&objective, best, options, 1, -1.0)?.map(|c| if c > 0.0 { 1.0 / c } else { f64::INFINITY })
     };
 
-    let by_half_rise = Objective { levels: &fit.levels, chart: Chart::HalfRise };
+    let by_half_rise = Objective {
+        levels: &fit.levels,
+        chart: Chart::HalfRise,
+    };
     let (best, options) = in_half_rise_chart(fit, &by_half_rise);
     let back = |point: [f64; 4]| [point[0], point[1] / point[0].exp(), point[2], point[3]];
     let up = side(&by_half_rise, &best, &options, 1, 1.0).map_err(back)?;

@@ -110,19 +110,35 @@ impl HyperbolaFit {
         }
         let at = self.solution.parameters[index];
         [-1.0, 1.0].map(|direction| {
-            let beyond = if direction < 0.0 { at <= options.lower[index] } else { at >= options.upper[index] };
+            let beyond = if direction < 0.0 {
+                at <= options.lower[index]
+            } else {
+                at >= options.upper[index]
+            };
             let end = if beyond {
                 direction * f64::INFINITY
             } else {
                 let mut evaluations = 0;
                 let solution = &self.solution;
-                match profile_side(&problem, solution, &options, index, direction, limit, &mut evaluations) {
+                match profile_side(
+                    &problem,
+                    solution,
+                    &options,
+                    index,
+                    direction,
+                    limit,
+                    &mut evaluations,
+                ) {
                     Side::Closed(value) => value,
                     Side::Open => direction * f64::INFINITY,
                     Side::Better(_) | Side::Lost => return None,
                 }
             };
-            Some(if parameter == Parameter::Threshold { end } else { end.exp() })
+            Some(if parameter == Parameter::Threshold {
+                end
+            } else {
+                end.exp()
+            })
         })
     }
 
@@ -164,7 +180,10 @@ pub fn fit_hyperbola(points: &[Point], held_threshold: Option<f64>) -> Option<Hy
     drives.sort_by(f64::total_cmp);
     drives.dedup();
     let parameters = if held_threshold.is_some() { 2 } else { 3 };
-    let telling = drives.iter().filter(|d| held_threshold.is_none_or(|t| **d > t)).count();
+    let telling = drives
+        .iter()
+        .filter(|d| held_threshold.is_none_or(|t| **d > t))
+        .count();
     let peak = points.iter().map(|p| p.rate).fold(0.0, f64::max);
     if telling < parameters || points.len() <= parameters || !(peak > 0.0) {
         return None;
@@ -184,8 +203,10 @@ pub fn fit_hyperbola(points: &[Point], held_threshold: Option<f64>) -> Option<Hy
         fixed: [false, false, held_threshold.is_some()],
         ..SolverOptions::default()
     };
-    let mut starts: Vec<(f64, [f64; 3])> =
-        thresholds.iter().filter_map(|threshold| best_start(points, *threshold, highest)).collect();
+    let mut starts: Vec<(f64, [f64; 3])> = thresholds
+        .iter()
+        .filter_map(|threshold| best_start(points, *threshold, highest))
+        .collect();
     starts.sort_by(|a, b| a.0.total_cmp(&b.0));
     let problem = Problem { points };
     let solution = starts
@@ -210,7 +231,10 @@ pub fn fit_hyperbola(points: &[Point], held_threshold: Option<f64>) -> Option<Hy
 /// Below the lowest drive at four distances, and between every two neighbours (ascending `drives`).
 fn threshold_starts(drives: &[f64], range: f64) -> Vec<f64> {
     let below = [2.0, 0.5, 0.1, 0.01].map(|part| drives[0] - part * range);
-    below.into_iter().chain(drives.windows(2).map(|pair| 0.5 * (pair[0] + pair[1]))).collect()
+    below
+        .into_iter()
+        .chain(drives.windows(2).map(|pair| 0.5 * (pair[0] + pair[1])))
+        .collect()
 }
 
 /// The best of a grid of half-rises at one threshold, each with its best max rate, which enters linearly.
@@ -245,8 +269,16 @@ mod tests {
             .map(|i| {
                 let drive = f64::from(i) * 50.0;
                 let rate = hyperbola(drive, &parameters).rate;
-                let shift = if rate > 0.0 { ripple * f64::from(i % 3 - 1) } else { 0.0 };
-                Point { drive, rate: rate + shift, se: 0.5 + 0.1 * f64::from(i % 4) }
+                let shift = if rate > 0.0 {
+                    ripple * f64::from(i % 3 - 1)
+                } else {
+                    0.0
+                };
+                Point {
+                    drive,
+                    rate: rate + shift,
+                    se: 0.5 + 0.1 * f64::from(i % 4),
+                }
             })
             .collect()
     }
@@ -291,7 +323,10 @@ mod tests {
             })
             .collect();
         let fit = fit_hyperbola(&line, Some(0.0)).unwrap();
-        assert_eq!(fit.interval(Parameter::MaxRate, Errors::Absolute)[1], Some(f64::INFINITY));
+        assert_eq!(
+            fit.interval(Parameter::MaxRate, Errors::Absolute)[1],
+            Some(f64::INFINITY)
+        );
         assert_eq!(fit.interval(Parameter::Threshold, Errors::Absolute), [None, None]);
     }
 

@@ -63,22 +63,37 @@ pub fn fit(points: &[Point], scatter: Scatter) -> Option<MainFit> {
         Scatter::Estimated => (0.05 * peak).powi(2),
         Scatter::Held(variance) => variance,
     };
-    let mut levels = Levels::new(points, first);
+    let levels = Levels::new(points, first);
     if points.len() <= PARAMETERS || levels.drives.len() < PARAMETERS || !(peak > 0.0) {
         return None;
     }
     let options = bounds(&levels, peak);
-    let mut search = Search { points, scatter, options, variance: first, evaluations: 0, residuals: Vec::new() };
+    let mut search = Search {
+        points,
+        scatter,
+        options,
+        variance: first,
+        evaluations: 0,
+        residuals: Vec::new(),
+    };
     let starts = starts(&levels);
-    let rough = SolverOptions { decrease_tolerance: 1e-3, max_iterations: 12, ..options };
+    let rough = SolverOptions {
+        decrease_tolerance: 1e-3,
+        max_iterations: 12,
+        ..options
+    };
     let mut followed: Vec<Solution<4>> = Vec::with_capacity(STARTS_FOLLOWED);
     for start in starts.iter().take(STARTS_FOLLOWED) {
         followed.push(search.minimise(&levels, *start, &rough));
     }
     followed.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
     let best = *followed.first()?;
-    let rivals: Vec<[f64; 4]> =
-        followed.iter().skip(1).filter(|f| far_apart(f, &best)).map(|f| f.parameters).collect();
+    let rivals: Vec<[f64; 4]> = followed
+        .iter()
+        .skip(1)
+        .filter(|f| far_apart(f, &best))
+        .map(|f| f.parameters)
+        .collect();
     let ramp_start = starts.iter().copied().find(|s| s[1] == 0.0);
     Some(search.finish(levels, best, &rivals, ramp_start))
 }
@@ -95,7 +110,12 @@ pub(super) fn refit_from(points: &[Point], scatter: Scatter, fit: &mut MainFit, 
     };
     let levels = std::mem::take(&mut fit.levels);
     let best = search.minimise(&levels, better, &fit.options);
-    *fit = search.finish(levels, best, &[fit.solution.parameters], Some(fit.ramp.parameters));
+    *fit = search.finish(
+        levels,
+        best,
+        &[fit.solution.parameters],
+        Some(fit.ramp.parameters),
+    );
 }
 
 /// The smoothed ramp fitted on its own terms: three parameters and its own extra variance.
@@ -143,9 +163,8 @@ fn far_apart(a: &Solution<4>, b: &Solution<4>) -> bool {
     let mut distance = 0.0;
     for i in 0..4 {
         for j in 0..4 {
-            distance += (a.parameters[i] - b.parameters[i])
-                * curvature[i][j]
-                * (a.parameters[j] - b.parameters[j]);
+            distance +=
+                (a.parameters[i] - b.parameters[i]) * curvature[i][j] * (a.parameters[j] - b.parameters[j]);
         }
     }
     // NaN counts as far.
@@ -218,7 +237,14 @@ impl Search<'_> {
     }
 
     fn minimise(&mut self, levels: &Levels, start: [f64; 4], options: &SolverOptions<4>) -> Solution<4> {
-        let found = minimise(&Objective { levels, chart: Chart::Ceiling }, start, options);
+        let found = minimise(
+            &Objective {
+                levels,
+                chart: Chart::Ceiling,
+            },
+            start,
+            options,
+        );
         self.evaluations += found.evaluations;
         found
     }
@@ -259,7 +285,10 @@ impl Search<'_> {
             self.variance += damped * change;
             levels.reweigh(self.points, self.variance);
             if change.abs() <= SETTLED * (target + interval_variance) {
-                let exact = SolverOptions { initial_damping: 1e-7, ..*options };
+                let exact = SolverOptions {
+                    initial_damping: 1e-7,
+                    ..*options
+                };
                 *best = self.minimise(levels, best.parameters, &exact);
                 return best.converged;
             }
@@ -269,10 +298,17 @@ impl Search<'_> {
 
     fn set_residuals(&mut self, levels: &Levels, at: &Solution<4>) {
         let mut fitted = vec![0.0; levels.drives.len()];
-        evaluate(Chart::Ceiling, &at.parameters, &levels.drives, |i, f, _| fitted[i] = f);
+        evaluate(Chart::Ceiling, &at.parameters, &levels.drives, |i, f, _| {
+            fitted[i] = f
+        });
         self.evaluations += 1;
         self.residuals.clear();
-        self.residuals.extend(self.points.iter().zip(levels.level_of_point()).map(|(p, l)| p.rate - fitted[l]));
+        self.residuals.extend(
+            self.points
+                .iter()
+                .zip(levels.level_of_point())
+                .map(|(p, l)| p.rate - fitted[l]),
+        );
     }
 
     /// The same objective with the ceiling at infinity.
@@ -316,7 +352,11 @@ pub fn covariance<const P: usize>(solution: &Solution<P>) -> Option<[[f64; P]; P
     }
     let scaled: [[f64; P]; P] = std::array::from_fn(|i| {
         std::array::from_fn(|j| {
-            if held[i] || held[j] { f64::from(u8::from(i == j)) } else { a[i][j] / (d[i] * d[j]) }
+            if held[i] || held[j] {
+                f64::from(u8::from(i == j))
+            } else {
+                a[i][j] / (d[i] * d[j])
+            }
         })
     });
     let mut inverse = [[0.0; P]; P];

@@ -121,7 +121,11 @@ impl LeastSquares<4> for Objective<'_> {
             chart: self.chart,
             parameters,
             drives: &l.drives,
-            each: Accumulate { rates: &l.rates, root_weights: &l.root_weights, sums },
+            each: Accumulate {
+                rates: &l.rates,
+                root_weights: &l.root_weights,
+                sums,
+            },
         });
     }
 }
@@ -141,7 +145,8 @@ impl Each for Accumulate<'_> {
     #[inline(always)]
     fn each(&mut self, index: usize, rate: f64, derivatives: &[f64; 4]) {
         let w = self.root_weights[index];
-        self.sums.add(w * (self.rates[index] - rate), &derivatives.map(|d| w * d));
+        self.sums
+            .add(w * (self.rates[index] - rate), &derivatives.map(|d| w * d));
     }
 }
 
@@ -175,14 +180,19 @@ impl<E: Each> Pass for EachDrive<'_, E> {
                 let rate = max_rate * f.h;
                 let by_gain = if half_rise_chart { rate } else { max_rate * f.bend };
                 let by_ceiling = -max_rate * max_rate * f.excess * by_second;
-                self.each.each(i, rate, &[by_gain, by_ceiling, -gain * f.dh_dz, max_rate * f.dh_dlns]);
+                self.each.each(
+                    i,
+                    rate,
+                    &[by_gain, by_ceiling, -gain * f.dh_dz, max_rate * f.dh_dlns],
+                );
             }
         } else {
             for (i, drive) in self.drives.iter().enumerate() {
                 let r = ramp(drive - threshold, noise);
                 let by_ceiling = -gain * gain * r.square * by_second;
                 let rate = gain * r.value;
-                self.each.each(i, rate, &[rate, by_ceiling, -gain * r.above, gain * r.spread]);
+                self.each
+                    .each(i, rate, &[rate, by_ceiling, -gain * r.above, gain * r.spread]);
             }
         }
     }
@@ -204,7 +214,12 @@ pub fn evaluate(
     drives: &[f64],
     mut each: impl FnMut(usize, f64, &[f64; 4]),
 ) {
-    vectorised(EachDrive { chart, parameters, drives, each: Store(&mut each) });
+    vectorised(EachDrive {
+        chart,
+        parameters,
+        drives,
+        each: Store(&mut each),
+    });
 }
 
 #[cfg(test)]
@@ -234,7 +249,11 @@ mod tests {
                     for i in 0..5 {
                         let slope = (up[i] - down[i]) / width;
                         let scale = at[i][k].abs().max(1e-3);
-                        assert!((slope - at[i][k]).abs() < 2e-3 * scale, "{chart:?} {second} {k} {i}: {slope} {}", at[i][k]);
+                        assert!(
+                            (slope - at[i][k]).abs() < 2e-3 * scale,
+                            "{chart:?} {second} {k} {i}: {slope} {}",
+                            at[i][k]
+                        );
                     }
                 }
             }
@@ -244,12 +263,20 @@ mod tests {
     #[test]
     fn grouping_repeats_changes_no_cost() {
         let points: Vec<Point> = (0..24)
-            .map(|i| Point { drive: f64::from(i / 3) * 50.0, rate: f64::from(i * i % 17), se: 0.5 + f64::from(i % 4) })
+            .map(|i| Point {
+                drive: f64::from(i / 3) * 50.0,
+                rate: f64::from(i * i % 17),
+                se: 0.5 + f64::from(i % 4),
+            })
             .collect();
         let p = [(0.3_f64).ln(), 0.02, 70.0, (30.0_f64).ln()];
         let levels = Levels::new(&points, 2.0);
         let mut sums = NormalSums::default();
-        Objective { levels: &levels, chart: Chart::Ceiling }.accumulate(&p, &mut sums);
+        Objective {
+            levels: &levels,
+            chart: Chart::Ceiling,
+        }
+        .accumulate(&p, &mut sums);
         let mut direct = 0.0;
         let drives: Vec<f64> = points.iter().map(|p| p.drive).collect();
         evaluate(Chart::Ceiling, &p, &drives, |i, f, _| {

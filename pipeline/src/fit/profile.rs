@@ -32,7 +32,11 @@ pub fn profile_side<const P: usize, L: LeastSquares<P>>(
     limit: f64,
     evaluations: &mut u64,
 ) -> Side<P> {
-    let wall = if direction < 0.0 { options.lower[index] } else { options.upper[index] };
+    let wall = if direction < 0.0 {
+        options.lower[index]
+    } else {
+        options.upper[index]
+    };
     let start = best.parameters[index];
     if start == wall {
         return Side::Open;
@@ -56,7 +60,7 @@ pub fn profile_side<const P: usize, L: LeastSquares<P>>(
     let mut at = *best;
     let mut next = start + direction * (scale * root_limit).min(options.stride[index]);
     for _ in 0..60 {
-            if (next - wall) * direction >= 0.0 {
+        if (next - wall) * direction >= 0.0 {
             next = wall;
         }
         let trial = carry(&at, index, next, options);
@@ -209,7 +213,9 @@ fn direct<const P: usize, L: LeastSquares<P>>(
         let least = 0.02 * part;
         loop {
             at = std::array::from_fn(|i| {
-                (before.0[i] + part * moves[i]).max(options.lower[i]).min(options.upper[i])
+                (before.0[i] + part * moves[i])
+                    .max(options.lower[i])
+                    .min(options.upper[i])
             });
             let inside = (at[index] - best.parameters[index]) * direction > 0.0
                 && at[index] > options.lower[index]
@@ -244,7 +250,13 @@ fn standard_deviation<const P: usize>(best: &Solution<P>, index: usize) -> Optio
     unit[index] = 1.0;
     let curvature = &best.sums.curvature;
     let mut scaled = [[0.0; P]; P];
-    let d: [f64; P] = std::array::from_fn(|i| if curvature[i][i] > 0.0 { curvature[i][i].sqrt() } else { 1.0 });
+    let d: [f64; P] = std::array::from_fn(|i| {
+        if curvature[i][i] > 0.0 {
+            curvature[i][i].sqrt()
+        } else {
+            1.0
+        }
+    });
     for i in 0..P {
         for j in 0..P {
             scaled[i][j] = curvature[i][j] / (d[i] * d[j]);
@@ -286,7 +298,9 @@ fn carry<const P: usize>(
         if i == index {
             value
         } else {
-            (from.parameters[i] + moves[i]).max(options.lower[i]).min(options.upper[i])
+            (from.parameters[i] + moves[i])
+                .max(options.lower[i])
+                .min(options.upper[i])
         }
     })
 }

@@ -21,7 +21,11 @@ pub struct NormalSums<const P: usize> {
 
 impl<const P: usize> Default for NormalSums<P> {
     fn default() -> Self {
-        Self { cost: 0.0, gradient: [0.0; P], curvature: [[0.0; P]; P] }
+        Self {
+            cost: 0.0,
+            gradient: [0.0; P],
+            curvature: [[0.0; P]; P],
+        }
     }
 }
 
@@ -197,6 +201,41 @@ impl<const P: usize> LevenbergMarquardt<P> {
         }
         Some(step)
     }
+
+    /// An undamped step from where the cost no longer tells better from worse: it is flat to rounding around its
+    /// minimum, over some 1e-8 of the parameters, while the gradient still points. Accepted if the step after it
+    /// promises a quarter or less, and the cost is the same to rounding.
+    fn polish<L: LeastSquares<P>>(
+        &mut self,
+        problem: &mut Problem<L>,
+        x: &[f64; P],
+        free: &[bool; P],
+    ) -> Result<Option<([f64; P], NormalSums<P>)>, Error> {
+        let Some(step) = self.step(free, 0.0) else {
+            return Ok(None);
+        };
+        let o = &self.options;
+        let trial: [f64; P] = std::array::from_fn(|i| {
+            if free[i] {
+                (x[i] + step[i]).clamp(o.lower[i], o.upper[i])
+            } else {
+                x[i]
+            }
+        });
+        let promise = dot(&step, &self.sums.gradient);
+        let cost = self.sums.cost;
+        let before = self.sums;
+        let sums = self.evaluate(problem, &trial)?;
+        if !(sums.is_finite() && sums.cost <= cost * (1.0 + ROUNDING_FLOOR)) {
+            return Ok(None);
+        }
+        self.sums = sums;
+        let next = self.step(free, 0.0).map(|step| dot(&step, &sums.gradient));
+        self.sums = before;
+        Ok(next
+            .is_some_and(|next| next <= 0.25 * promise)
+            .then_some((trial, sums)))
+    }
 }
 
 /// Cholesky factor of the lower triangle `a`; `None` unless positive definite.
@@ -266,7 +305,10 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
         if self.sums.is_finite() {
             Ok((state, None))
         } else {
-            Ok((state.terminate_with(TerminationReason::SolverExit("start outside the domain".into())), None))
+            Ok((
+                state.terminate_with(TerminationReason::SolverExit("start outside the domain".into())),
+                None,
+            ))
         }
     }
 
@@ -291,7 +333,9 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
             return stop(self, state, true);
         }
         // What an undamped step promises: the Newton decrement, scale free.
-        let promise = self.step(&free, 0.0).map(|newton| dot(&newton, &self.sums.gradient));
+        let promise = self
+            .step(&free, 0.0)
+            .map(|newton| dot(&newton, &self.sums.gradient));
         if promise.is_some_and(|p| p <= self.options.decrease_tolerance * cost) {
             return stop(self, state, true);
         }
@@ -306,7 +350,11 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
             };
             let o = &self.options;
             let trial: [f64; P] = std::array::from_fn(|i| {
-                if free[i] { (x[i] + step[i]).clamp(o.lower[i], o.upper[i]) } else { x[i] }
+                if free[i] {
+                    (x[i] + step[i]).clamp(o.lower[i], o.upper[i])
+                } else {
+                    x[i]
+                }
             });
             let moved: [f64; P] = std::array::from_fn(|i| trial[i] - x[i]);
             if (0..P).all(|i| moved[i].abs() <= o.step_tolerance * x[i].abs()) {
@@ -337,7 +385,13 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
                 && predicted.abs() <= ROUNDING_FLOOR * cost
                 && promise.is_some_and(|p| p <= ROUNDING_FLOOR.sqrt() * cost)
             {
-                return stop(self, state, true);
+                return match self.polish(problem, &x, &free)? {
+                    Some((polished, sums)) => {
+                        self.sums = sums;
+                        Ok((state.param(polished).cost(sums.cost), None))
+                    }
+                    None => stop(self, state, true),
+                };
             }
             self.damping *= self.growth;
             self.growth *= 2.0;
@@ -361,7 +415,11 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
     options: &SolverOptions<P>,
 ) -> Solution<P> {
     let start: [f64; P] = std::array::from_fn(|i| {
-        if options.fixed[i] { start[i] } else { start[i].max(options.lower[i]).min(options.upper[i]) }
+        if options.fixed[i] {
+            start[i]
+        } else {
+            start[i].max(options.lower[i]).min(options.upper[i])
+        }
     });
     let solver = LevenbergMarquardt {
         options: *options,
@@ -403,7 +461,10 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
         // The executor itself only fails when the problem or solver returns an error, which neither does.
         Err(_) => Solution {
             parameters: start,
-            sums: NormalSums { cost: f64::INFINITY, ..NormalSums::default() },
+            sums: NormalSums {
+                cost: f64::INFINITY,
+                ..NormalSums::default()
+            },
             converged: false,
             at_bound: [false; P],
             iterations: 0,

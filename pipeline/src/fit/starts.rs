@@ -34,7 +34,13 @@ pub fn starts(levels: &Levels) -> Vec<[f64; 4]> {
             let mut best: Option<(f64, [f64; 4])> = None;
             for half_rise in HALF_RISE.map(|k| k * (highest - threshold)) {
                 let (mut cross, mut square, mut total) = (0.0, 0.0, 0.0);
-                let shape = |ramp: f64| if half_rise.is_finite() { ramp / (half_rise + ramp) } else { ramp };
+                let shape = |ramp: f64| {
+                    if half_rise.is_finite() {
+                        ramp / (half_rise + ramp)
+                    } else {
+                        ramp
+                    }
+                };
                 for ((ramp, rate), root) in ramps.iter().zip(&levels.rates).zip(&levels.root_weights) {
                     let (f, y) = (root * shape(*ramp), root * rate);
                     cross += f * y;
@@ -46,8 +52,11 @@ pub fn starts(levels: &Levels) -> Vec<[f64; 4]> {
                 }
                 let scale = cross / square;
                 let cost = total - scale * cross;
-                let (gain, ceiling) =
-                    if half_rise.is_finite() { (scale / half_rise, 1.0 / scale) } else { (scale, 0.0) };
+                let (gain, ceiling) = if half_rise.is_finite() {
+                    (scale / half_rise, 1.0 / scale)
+                } else {
+                    (scale, 0.0)
+                };
                 if best.is_none_or(|(least, _)| cost < least) {
                     best = Some((cost, [gain.ln(), ceiling, threshold, noise.ln()]));
                 }
@@ -68,7 +77,11 @@ fn thresholds(levels: &Levels, peak: f64, range: f64) -> Vec<f64> {
             return levels.drives[0];
         }
         let (low, high) = (levels.rates[at - 1], levels.rates[at]);
-        let part = if high > low { (target - low) / (high - low) } else { 0.0 };
+        let part = if high > low {
+            (target - low) / (high - low)
+        } else {
+            0.0
+        };
         levels.drives[at - 1] + part * (levels.drives[at] - levels.drives[at - 1])
     };
     let mut list: Vec<f64> = CROSSING.map(crossing).to_vec();
@@ -82,5 +95,9 @@ fn thresholds(levels: &Levels, peak: f64, range: f64) -> Vec<f64> {
 /// E\[(w + X)+\] to a few per cent, by a logistic stand-in for the normal distribution.
 fn cheap_ramp(w: f64) -> f64 {
     const SHARPNESS: f64 = 1.702;
-    if w * SHARPNESS > 30.0 { w } else { (w * SHARPNESS).exp().ln_1p() / SHARPNESS }
+    if w * SHARPNESS > 30.0 {
+        w
+    } else {
+        (w * SHARPNESS).exp().ln_1p() / SHARPNESS
+    }
 }

@@ -37,19 +37,34 @@ pub fn cell_interval_cv(step_spikes: &[&[f64]]) -> CellCv {
         if let Some(value) = detrended_cv(&intervals) {
             let degrees = (intervals.len() - 2) as f64;
             let value = value / (1.0 - 2.0 / (9.0 * degrees)).powf(1.5);
-            if intervals.len() >= INTERVALS_FOR_CV { long.push(value) } else { short.push(value) }
+            if intervals.len() >= INTERVALS_FOR_CV {
+                long.push(value)
+            } else {
+                short.push(value)
+            }
         }
     }
     let enough = !long.is_empty();
     let mut values = if enough { long } else { short };
     if values.is_empty() {
-        return CellCv { cv: ASSUMED_CV, steps: 0, enough: false };
+        return CellCv {
+            cv: ASSUMED_CV,
+            steps: 0,
+            enough: false,
+        };
     }
     values.sort_by(f64::total_cmp);
     let middle = values.len() / 2;
-    let median =
-        if values.len() % 2 == 1 { values[middle] } else { 0.5 * (values[middle - 1] + values[middle]) };
-    CellCv { cv: median, steps: values.len(), enough }
+    let median = if values.len() % 2 == 1 {
+        values[middle]
+    } else {
+        0.5 * (values[middle - 1] + values[middle])
+    };
+    CellCv {
+        cv: median,
+        steps: values.len(),
+        enough,
+    }
 }
 
 /// Standard deviation that the fit gives a step's rate, Hz: never less than `rate_se_hz`.
@@ -87,7 +102,16 @@ pub fn step_rates(
         .iter()
         .enumerate()
         .map(|(step, (onset, offset, spikes))| {
-            one_step(step, *onset, *offset, spikes, response, cell_cv, settings, &mut intervals)
+            one_step(
+                step,
+                *onset,
+                *offset,
+                spikes,
+                response,
+                cell_cv,
+                settings,
+                &mut intervals,
+            )
         })
         .collect()
 }
@@ -118,7 +142,11 @@ fn one_step(
     let (rate_hz, rate_from, rate_se_hz) = match interval_rate(inside) {
         Some(rate) => {
             let se = rate * cell_cv / (intervals.len() as f64).sqrt();
-            (rate, RateFrom::Intervals, se.max(FLOOR_FRACTION.sqrt() * one_count))
+            (
+                rate,
+                RateFrom::Intervals,
+                se.max(FLOOR_FRACTION.sqrt() * one_count),
+            )
         }
         None if inside.is_empty() => (0.0, RateFrom::Silent, one_count),
         None => (1.0 / length, RateFrom::OneSpike, one_count),
@@ -134,13 +162,17 @@ fn one_step(
         rate_hz,
         rate_se_hz,
         rate_from,
-        first_spike_latency_s: (response != Response::Steady).then(|| inside.first().map(|t| t - onset)).flatten(),
+        first_spike_latency_s: (response != Response::Steady)
+            .then(|| inside.first().map(|t| t - onset))
+            .flatten(),
         min_interval_s: intervals.iter().copied().reduce(f64::min),
         cv: cv(intervals),
         cv2: cv2(intervals),
         lv: lv(intervals),
         lvr: lvr(intervals, settings.lvr_refractory_s),
-        adaptation_ratio: (intervals.len() > 1).then(|| first.zip(last).map(|(f, l)| f / l)).flatten(),
+        adaptation_ratio: (intervals.len() > 1)
+            .then(|| first.zip(last).map(|(f, l)| f / l))
+            .flatten(),
         used: false,
         fitted_hz: None,
         residual_hz: None,
@@ -164,7 +196,10 @@ mod tests {
         assert_eq!((silent.rate_hz, silent.rate_from), (0.0, RateFrom::Silent));
         assert_eq!(silent.rate_se_hz, one_count);
         let one = rate(&[0.4], Response::Whole);
-        assert_eq!((one.rate_hz, one.rate_from, one.rate_se_hz), (1.0, RateFrom::OneSpike, one_count));
+        assert_eq!(
+            (one.rate_hz, one.rate_from, one.rate_se_hz),
+            (1.0, RateFrom::OneSpike, one_count)
+        );
         assert_eq!(one.first_spike_latency_s, Some(0.4));
         let many = rate(&[0.1, 0.2, 0.4, 0.7, 0.9], Response::Whole);
         assert!((many.rate_hz - 5.0).abs() < 1e-12);
@@ -206,6 +241,13 @@ mod tests {
         assert!(cv.cv < 1e-12 && cv.enough && cv.steps == 1);
         let few = cell_interval_cv(&[&short]);
         assert!(!few.enough && few.steps == 1 && few.cv > 0.5);
-        assert_eq!(cell_interval_cv(&[]), CellCv { cv: 1.0, steps: 0, enough: false });
+        assert_eq!(
+            cell_interval_cv(&[]),
+            CellCv {
+                cv: 1.0,
+                steps: 0,
+                enough: false
+            }
+        );
     }
 }

@@ -1,7 +1,6 @@
 //! How the figures of a run were made: settings, methods in a few sentences, references.
 
-use super::numbers::significant_text;
-use super::text::{id_markdown, sentence_markdown, table_head, table_row};
+use super::text::{sentence_markdown, table_head, table_row};
 use crate::settings::Analysis;
 
 /// Every setting with the value used.
@@ -30,7 +29,8 @@ pub(super) fn settings_section(settings: &Analysis) -> String {
 
 /// The methods in a few sentences.
 pub(super) fn methods_section(settings: &Analysis) -> String {
-    let percent = |fraction: f64| id_markdown(&format!("{} %", significant_text(100.0 * fraction)));
+    // Rounded so that 0.07 is not 7.000000000000001 %.
+    let percent = |fraction: f64| format!("{} %", (1e6 * fraction).round() / 1e4);
     let intervals = if settings.profiles {
         "Intervals are 95 % profile likelihood intervals: all values of a parameter that, with the others fitted anew, \
          raise the deviance by no more than F(0.95; 1, steps - 4) (Bates & Watts 1988; Venzon & Moolgavkar 1988). They \
@@ -46,11 +46,13 @@ pub(super) fn methods_section(settings: &Analysis) -> String {
          is the whole step, `steady` its last {steady}, `onset` its first interval. Interval statistics in \
          steps.parquet: CV, CV2 (Holt et al. 1996), LV (Shinomoto et al. 2003) and LvR (Shinomoto et al. 2009, \
          refractoriness constant {refractory} s).\n\n\
-         **Standard errors and weights.** The standard error of a rate is rate x CV/sqrt(n - 1), with the cell's \
-         interval CV (the median over its steps with five intervals or more). In the fit a step with one spike or none \
-         has an SD of half a count, 1/(2 T) for a window of length T; for the others 1/(12 T^2), the resolution of one \
-         count, is added to the squared standard error, because recorded rates scatter there more than the intervals \
-         alone tell. A between-step variance (`extra_sd`, the square root of it) is added to every step so that the \
+         **Standard errors and weights.** The standard error of a rate is rate x CV/sqrt(n - 1) with the cell's \
+         interval CV, the median over its steps with five intervals or more of the CV without its linear trend over \
+         time (over those with three or more where there are none; 1 where there are none of these either), and at \
+         least sqrt(0.05/12)/T for a window of length T; with one spike or none it is 1/(sqrt(12) T). In the fit a \
+         step with one spike or none has an SD of half a count, 1/(2 T); to the squared standard error of the others \
+         1/(12 T^2), the resolution of one count, is added, because recorded rates scatter more there than interval \
+         noise alone. A between-step variance (`extra_sd`, the square root of it) is added to every step so that the \
          weighted squared residuals equal the degrees of freedom (the estimator of Paule & Mandel 1982); the weight \
          of a step is the reciprocal of the sum.\n\n\
          **Rate function.** rate = max rate x E\\[H(u)\\], H(u) = u/(1 + u) above threshold and 0 below, u = (drive - \
@@ -58,7 +60,8 @@ pub(super) fn methods_section(settings: &Analysis) -> String {
          1966) with Gaussian input noise of SD `noise_sd` averaged in. Initial gain is max rate/half-rise. Half-rise \
          is counted from the threshold. Rate functions are compared by AICc (Hurvich & Tsai 1989) in \
          goodness.parquet.\n\n\
-         **Intervals.** {intervals} A fit that did not converge gives no numbers.\n\n\
+         **Intervals.** {intervals} The band of the curve is by the delta method. A fit that did not \
+         converge gives no numbers.\n\n\
          **Verdicts on the ceiling.** `silent`: fewer than {silent} steps with a rate from intervals. `declining`: \
          above the peak the mean rate falls below {fraction} of it by more than {se} standard errors on two levels or \
          more, or below {last} of it on the last level; the steps above the peak are left out and the rest is \
@@ -66,12 +69,12 @@ pub(super) fn methods_section(settings: &Analysis) -> String {
          closed, but the upper bound is more than {ratio} times the lower. `resolved`: otherwise. A cell is usable \
          when it is fitted, `resolved` or `loose`, and no flag rejects it.\n\n",
         steady = percent(settings.steady_fraction),
-        refractory = significant_text(settings.lvr_refractory_s),
+        refractory = settings.lvr_refractory_s,
         silent = settings.min_interval_steps,
         fraction = percent(settings.declining_fraction),
-        se = significant_text(settings.declining_se),
+        se = settings.declining_se,
         last = percent(settings.declining_last_fraction),
-        ratio = significant_text(settings.loose_ratio),
+        ratio = settings.loose_ratio,
     )
 }
 

@@ -13,8 +13,9 @@ const NOTES_LISTED: usize = 50;
 
 /// One line on what the set is.
 pub(super) fn set_line(set: &RecordingSet) -> String {
-    let steps: u64 = set.cells.iter().map(|cell| cell.steps.len() as u64).sum();
-    let spikes: u64 = set.cells.iter().map(|cell| cell.spikes_s.len() as u64).sum();
+    // From the row counts: the spikes themselves may have been let go by now.
+    let steps = set.protocol_rows.used;
+    let spikes = set.spike_rows.used + set.spike_rows.outside_steps;
     let mut groups: Vec<&str> = set
         .cells
         .iter()

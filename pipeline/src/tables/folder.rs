@@ -80,7 +80,8 @@ impl ResultFolder {
         self.commit_by(|from, to| fs::rename(from, to))
     }
 
-    fn commit_by(self, rename: impl Fn(&Path, &Path) -> io::Result<()>) -> Result<(), WriteError> {
+    /// [`ResultFolder::commit`] with the renaming handed in, so that its failures can be tried.
+    pub(super) fn commit_by(self, rename: impl Fn(&Path, &Path) -> io::Result<()>) -> Result<(), WriteError> {
         let Self {
             out,
             overwrite,

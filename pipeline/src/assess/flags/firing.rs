@@ -9,7 +9,10 @@ fn spikes_in_windows(e: &Evidence<'_>) -> usize {
 
 /// Shortest interval inside any step, seconds.
 fn shortest_interval(e: &Evidence<'_>) -> Option<f64> {
-    e.rates.iter().filter_map(|r| r.min_interval_s).min_by(f64::total_cmp)
+    e.rates
+        .iter()
+        .filter_map(|r| r.min_interval_s)
+        .min_by(f64::total_cmp)
 }
 
 pub(super) fn few_spikes(e: &Evidence<'_>) -> Option<Flag> {
@@ -36,7 +39,10 @@ pub(super) fn short_interval(e: &Evidence<'_>) -> Option<Flag> {
         Severity::Caution,
         shortest,
         e.settings.short_interval_s,
-        format!("two spikes {:.3} ms apart: one spike detected twice, or two cells", shortest * 1e3),
+        format!(
+            "two spikes {:.3} ms apart: one spike detected twice, or two cells",
+            shortest * 1e3
+        ),
     )
 }
 
@@ -125,7 +131,10 @@ pub(super) fn irregular(e: &Evidence<'_>) -> Option<Flag> {
         Severity::Note,
         e.cell_cv.cv,
         e.settings.irregular_cv,
-        format!("intervals are irregular (CV {:.2}): single rates are uncertain", e.cell_cv.cv),
+        format!(
+            "intervals are irregular (CV {:.2}): single rates are uncertain",
+            e.cell_cv.cv
+        ),
     )
 }
 

@@ -23,7 +23,10 @@ pub(super) fn touched_bound(e: &Evidence<'_>) -> Option<Flag> {
     let message = if at.as_slice() == ["noise_sd"] {
         "the curve bends at threshold as sharply as the levels can show: the noise SD is too small to be measured".into()
     } else {
-        format!("{} ended on the bound of the search: the data do not determine it", at.join(", "))
+        format!(
+            "{} ended on the bound of the search: the data do not determine it",
+            at.join(", ")
+        )
     };
     flag("touched-bound", Severity::Caution, None, None, message)
 }

@@ -12,7 +12,10 @@ pub(super) fn few_levels(e: &Evidence<'_>) -> Option<Flag> {
         Severity::Caution,
         e.levels as f64,
         e.settings.few_levels as f64,
-        format!("only {} different drives were used for a curve of four parameters", e.levels),
+        format!(
+            "only {} different drives were used for a curve of four parameters",
+            e.levels
+        ),
     )
 }
 
@@ -48,6 +51,9 @@ pub(super) fn below_half_rise(e: &Evidence<'_>) -> Option<Flag> {
         Severity::Caution,
         largest,
         half,
-        format!("no drive reached half of the fitted maximum rate ({half:.4} {} needed)", e.drive_unit),
+        format!(
+            "no drive reached half of the fitted maximum rate ({half:.4} {} needed)",
+            e.drive_unit
+        ),
     )
 }

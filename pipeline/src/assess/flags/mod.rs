@@ -73,5 +73,11 @@ fn flag(
     limit: impl Into<Option<f64>>,
     message: String,
 ) -> Option<Flag> {
-    Some(Flag { flag: name, severity, value: value.into(), limit: limit.into(), message })
+    Some(Flag {
+        flag: name,
+        severity,
+        value: value.into(),
+        limit: limit.into(),
+        message,
+    })
 }

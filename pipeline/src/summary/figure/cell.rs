@@ -4,7 +4,7 @@ use super::canvas::{Anchor, Canvas, Font, PALE, fit_text, font, wrap_text};
 use super::legend::{Mark, draw_legend, legend_height};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel};
 use crate::assess::{CellResult, ResponseResult, Status};
-use crate::summary::numbers::{count_text, estimate_text, significant_text};
+use crate::summary::numbers::{count_text, estimate_text};
 use crate::summary::text::{ID_LENGTH, visible};
 
 const LEFT: f64 = 56.0;
@@ -88,7 +88,11 @@ pub fn cell_figure(cell: &CellResult) -> Option<String> {
             bold: true,
             ..font(11.5)
         };
-        let text = fit_text(&heading_text(panel, response), &heading, header_width);
+        let text = fit_text(
+            &format!("{}: {}", panel.response.name(), panel.verdict()),
+            &heading,
+            header_width,
+        );
         canvas.text((start + EDGE, HEADER_TOP), &text, heading);
         let small = Font {
             colour: PALE,
@@ -151,36 +155,28 @@ fn subtitle_text(cell: &CellResult, panels: &[Panel]) -> String {
     parts.join(", ")
 }
 
-fn heading_text(panel: &Panel, response: &ResponseResult) -> String {
-    let mut text = format!("{}: {}", panel.response.name(), panel.verdict());
-    if let Some(reached) = response
-        .reached
-        .filter(|r| r.is_finite() && panel.status == Status::Fitted)
-    {
-        text.push_str(&format!(
-            ", {} % of max rate reached",
-            significant_text((100.0 * reached).round())
-        ));
-    }
-    text
-}
-
 /// Up to four lines under the heading: the parameters, or why there are none.
 fn header_lines(panel: &Panel, response: &ResponseResult, small: &Font, width: f64) -> Vec<String> {
     if response.status != Status::Fitted {
         return wrap_text(&visible(&response.reason, 300), small, width, 4);
     }
     let unit = panel.unit;
+    let reached = response
+        .reached
+        .filter(|reached| reached.is_finite())
+        .map_or_else(String::new, |reached| {
+            format!(", {} % reached", fixed_percent(reached))
+        });
     [
-        ("max rate", &response.max_rate, "Hz"),
-        ("half-rise", &response.half_rise, unit),
-        ("threshold", &response.threshold, unit),
-        ("noise SD", &response.noise_sd, unit),
+        ("max rate", &response.max_rate, "Hz", reached.as_str()),
+        ("half-rise", &response.half_rise, unit, ""),
+        ("threshold", &response.threshold, unit, ""),
+        ("noise SD", &response.noise_sd, unit, ""),
     ]
     .iter()
-    .map(|(name, estimate, unit)| {
+    .map(|(name, estimate, unit, more)| {
         fit_text(
-            &format!("{name} {} {unit}", short_estimate(estimate)),
+            &format!("{name} {} {unit}{more}", short_estimate(estimate)),
             small,
             width,
         )
@@ -188,7 +184,14 @@ fn header_lines(panel: &Panel, response: &ResponseResult, small: &Font, width: f
     .collect()
 }
 
-/// As in the tables, but an open value says only its one bound.
+/// A fraction in whole percent.
+fn fixed_percent(fraction: f64) -> String {
+    format!("{:.0}", 100.0 * fraction.clamp(0.0, 10.0))
+}
+
+/// As in the tables, but an open value says only its one bound, and minus signs are set as such.
 fn short_estimate(estimate: &crate::assess::Estimate) -> String {
-    estimate_text(estimate).replace(", no upper bound)", ")")
+    estimate_text(estimate)
+        .replace(", no upper bound)", ")")
+        .replace('-', "\u{2212}")
 }

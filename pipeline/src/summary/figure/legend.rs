@@ -13,6 +13,8 @@ pub(super) enum Mark {
     Unused,
     /// The fitted curve with its band.
     Curve,
+    /// The band alone.
+    Band,
     /// The threshold with its interval.
     Threshold,
     /// The ceiling with its interval.
@@ -27,6 +29,7 @@ impl Mark {
             Self::Used => "rate of a step ± 1 SE",
             Self::Unused => "step not used by the fit",
             Self::Curve => "fitted rate function, 95 % band",
+            Self::Band => "95 % band",
             Self::Threshold => "threshold, 95 % interval",
             Self::Ceiling => "ceiling, 95 % interval",
             Self::Verdict(verdict) => verdict.name(),
@@ -86,6 +89,13 @@ pub(super) fn draw_legend(canvas: &mut Canvas, marks: &[Mark], at: (f64, f64), w
                     0.75,
                 );
                 canvas.line((x, y), (end, y), solid(CURVE, 1.8));
+            }
+            Mark::Band => {
+                canvas.area(
+                    &[(x, y - 5.0), (end, y - 5.0), (end, y + 5.0), (x, y + 5.0)],
+                    BAND,
+                    0.75,
+                );
             }
             Mark::Threshold => {
                 canvas.line((x + 2.0, y), (end - 2.0, y), solid(INK, 1.2));

@@ -109,6 +109,9 @@ impl Overview {
                 marks.push(Mark::Verdict(verdict));
             }
         }
+        if self.drawn.iter().any(|d| d.panel.has_curve()) {
+            marks.push(Mark::Band);
+        }
         if self.drawn.iter().any(|d| d.panel.has_threshold()) {
             marks.push(Mark::Threshold);
         }
@@ -177,7 +180,14 @@ impl Overview {
         } else {
             format!("drive ({})", first.panel.unit)
         };
-        canvas.text((left + 0.5 * inner, grid_bottom + 14.0), &drive, axis);
+        canvas.text(
+            (
+                left + 0.5 * cell_width * columns.min(self.drawn.len()) as f64,
+                grid_bottom + 14.0,
+            ),
+            &drive,
+            axis,
+        );
         canvas.rotated_text(
             (EDGE + 11.0, 0.5 * (TITLE + grid_bottom)),
             "rate (Hz)",

@@ -153,6 +153,8 @@ pub(super) struct PanelStyle {
 
 /// Most the ceiling may stand above the data to be drawn rather than named.
 const CEILING_IN_SIGHT: f64 = 1.6;
+/// Highest rate of the axis where no step has a rate, Hz.
+const SILENT_RANGE: f64 = 5.0;
 
 fn finite(number: Option<f64>) -> Option<f64> {
     number.filter(|n| n.is_finite())
@@ -183,7 +185,20 @@ fn rate_range(panel: &Panel) -> (f64, Option<f64>) {
         let hi = finite(panel.max_rate.hi).map_or(ceiling, |hi| hi.min(1.25 * ceiling.max(curve)));
         top = top.max(ceiling).max(hi);
     }
-    (if top > 0.0 && top.is_finite() { top } else { 1.0 }, ceiling)
+    // A cell that never fires is drawn as such, not as bars that fill the panel.
+    let least = if data > 0.0 {
+        f64::MIN_POSITIVE
+    } else {
+        SILENT_RANGE
+    };
+    (
+        if top.is_finite() {
+            top.max(least)
+        } else {
+            SILENT_RANGE
+        },
+        ceiling,
+    )
 }
 
 /// Lowest and highest drive shown.
@@ -375,22 +390,26 @@ fn draw_threshold(canvas: &mut Canvas, panel: &Panel, x: &Scale, bottom: f64, st
     };
     let at = bottom - 0.45 * style.strip;
     let half = 0.32 * style.strip;
+    // Small panels have no room for caps.
+    let (thin, thick) = if style.large { (1.2, 1.6) } else { (0.8, 1.0) };
     if let (Some(lo), Some(hi)) = (
         panel.threshold.lo.filter(|b| !b.is_nan()),
         panel.threshold.hi.filter(|b| !b.is_nan()),
     ) {
-        canvas.line((x.clamped(lo), at), (x.clamped(hi), at), solid(INK, 1.2));
+        canvas.line((x.clamped(lo), at), (x.clamped(hi), at), solid(INK, thin));
         for (bound, towards) in [(lo, -1.0), (hi, 1.0)] {
             let end = x.clamped(bound);
             if x.holds(bound) {
-                canvas.line((end, at - 0.6 * half), (end, at + 0.6 * half), solid(INK, 1.2));
+                if style.large {
+                    canvas.line((end, at - 0.6 * half), (end, at + 0.6 * half), solid(INK, thin));
+                }
             } else {
                 triangle(canvas, (end, at), (towards, 0.0), 1.2 * half);
             }
         }
     }
     if x.holds(value) {
-        canvas.line((x.at(value), bottom), (x.at(value), at - half), solid(INK, 1.6));
+        canvas.line((x.at(value), bottom), (x.at(value), at - half), solid(INK, thick));
     } else {
         let towards = if x.at(value) < x.clamped(value) { -1.0 } else { 1.0 };
         triangle(canvas, (x.clamped(value), at), (towards, 0.0), 1.2 * half);

@@ -46,11 +46,12 @@ pub(super) fn ticks(lowest: f64, highest: f64, wanted: usize) -> Vec<(f64, Strin
     }
     let rough = span / wanted as f64;
     let power = 10f64.powf(rough.log10().floor());
+    let miss = |step: &f64| (span / step - wanted as f64).abs();
     let step = [1.0, 2.0, 5.0, 10.0]
         .into_iter()
         .map(|m| m * power)
-        .find(|step| *step >= rough * 0.999)
-        .unwrap_or(10.0 * power);
+        .min_by(|a, b| miss(a).total_cmp(&miss(b)))
+        .unwrap_or(power);
     let first = (lowest / step - 1e-9).ceil();
     let last = (highest / step + 1e-9).floor();
     if !(first.is_finite() && last.is_finite() && last - first < 1000.0 && first.abs() < 1e12) {
@@ -94,10 +95,8 @@ mod tests {
     fn ticks_are_round() {
         assert_eq!(labels(0.0, 100.0, 5), ["0", "20", "40", "60", "80", "100"]);
         assert_eq!(labels(-60.0, 410.0, 5), ["0", "100", "200", "300", "400"]);
-        assert_eq!(
-            labels(0.0, 1.0, 4),
-            ["0.0", "0.5", "1.0"].map(|t| if t == "0.0" { "0" } else { t })
-        );
+        assert_eq!(labels(0.0, 1.0, 4), ["0", "0.2", "0.4", "0.6", "0.8", "1.0"]);
+        assert_eq!(labels(0.0, 129.0, 5), ["0", "20", "40", "60", "80", "100", "120"]);
         assert_eq!(
             labels(-0.1, 0.1, 4),
             ["\u{2212}0.10", "\u{2212}0.05", "0", "0.05", "0.10"]
