@@ -9,5 +9,6 @@ mod hyperbola;
 mod integrate_and_fire;
 mod intervals;
 mod nist;
+mod referee;
 mod smoothed_hyperbola;
 mod support;

@@ -1,0 +1,104 @@
+//! The fit of the main curve against an independent search of the same objective: 68 simulated data sets, each with
+//! the smallest weighted sum of squares that SciPy found from 48 starts (`fixtures/referee`, with its script).
+
+use halfrise::curve::smoothed_hyperbola::evaluate;
+use halfrise::curve::smoothed_ramp::ramp;
+use halfrise::fit::Point;
+use halfrise::fit::main_fit::{Scatter, fit};
+use serde_json::Value;
+
+use super::support::json;
+
+/// The referee may not find a sum of squares lower by more than this, relatively.
+const TOLERANCE: f64 = 1e-6;
+
+struct DataSet {
+    name: String,
+    points: Vec<Point>,
+    extra_variance: f64,
+    cost: f64,
+    best: Value,
+}
+
+fn data_sets() -> Vec<DataSet> {
+    let number = |v: &Value| v.as_f64().unwrap();
+    json("referee/referee.json")["sets"]
+        .as_array()
+        .unwrap()
+        .iter()
+        .map(|set| DataSet {
+            name: format!("{} {}", set["kind"].as_str().unwrap(), set["seed"]),
+            points: set["points"]
+                .as_array()
+                .unwrap()
+                .iter()
+                .map(|p| Point { drive: number(&p[0]), rate: number(&p[1]), se: number(&p[2]) })
+                .collect(),
+            extra_variance: number(&set["extra_sd"]).powi(2),
+            cost: number(&set["cost"]),
+            best: set["best"].clone(),
+        })
+        .collect()
+}
+
+impl DataSet {
+    fn cost_of(&self, curve: impl Fn(f64) -> f64) -> f64 {
+        self.points
+            .iter()
+            .map(|p| (p.rate - curve(p.drive)).powi(2) / (p.se * p.se + self.extra_variance))
+            .sum()
+    }
+}
+
+#[test]
+fn the_referee_scores_the_same_objective() {
+    let mut compared = 0;
+    for set in data_sets() {
+        let best = |key: &str| set.best[key].as_f64();
+        let (threshold, noise) = (best("threshold").unwrap(), best("noise_sd").unwrap());
+        let cost = match (best("max_rate"), best("half_rise")) {
+            (Some(max_rate), Some(half_rise)) => {
+                set.cost_of(|d| max_rate * evaluate((d - threshold) / half_rise, noise / half_rise).h)
+            }
+            _ => {
+                let gain = best("initial_gain").unwrap();
+                set.cost_of(|d| gain * ramp(d - threshold, noise).value)
+            }
+        };
+        assert!((cost / set.cost - 1.0).abs() < 1e-8, "{}: {cost} against {}", set.name, set.cost);
+        compared += 1;
+    }
+    assert_eq!(compared, 68);
+}
+
+#[test]
+fn the_referee_finds_no_better_fit() {
+    let mut worse = Vec::new();
+    let mut matched = 0;
+    for set in data_sets() {
+        let found = fit(&set.points, Scatter::Held(set.extra_variance)).unwrap();
+        let excess = found.solution.cost() / set.cost - 1.0;
+        let p = found.solution.parameters;
+        let line = format!(
+            "{}: {:.9} against {:.9}, {excess:+.1e}; max rate {:.5}, gain {:.5}, threshold {:.4}, noise {:.4}, at bound {:?}; referee {}",
+            set.name,
+            found.solution.cost(),
+            set.cost,
+            1.0 / p[1],
+            p[0].exp(),
+            p[2],
+            p[3].exp(),
+            found.solution.at_bound,
+            set.best
+        );
+        println!("{line}");
+        if !(excess <= TOLERANCE) || !found.converged {
+            worse.push(line);
+        } else if excess >= -TOLERANCE {
+            matched += 1;
+        }
+    }
+    // A referee that lags behind would make the check empty.
+    assert!(worse.is_empty(), "{} worse:\n{}", worse.len(), worse.join("\n"));
+    assert_eq!(matched, 68, "the referee was beaten");
+}
