@@ -32,7 +32,11 @@ fn data_sets() -> Vec<DataSet> {
                 .as_array()
                 .unwrap()
                 .iter()
-                .map(|p| Point { drive: number(&p[0]), rate: number(&p[1]), se: number(&p[2]) })
+                .map(|p| Point {
+                    drive: number(&p[0]),
+                    rate: number(&p[1]),
+                    se: number(&p[2]),
+                })
                 .collect(),
             extra_variance: number(&set["extra_sd"]).powi(2),
             cost: number(&set["cost"]),
@@ -65,7 +69,12 @@ fn the_referee_scores_the_same_objective() {
                 set.cost_of(|d| gain * ramp(d - threshold, noise).value)
             }
         };
-        assert!((cost / set.cost - 1.0).abs() < 1e-8, "{}: {cost} against {}", set.name, set.cost);
+        assert!(
+            (cost / set.cost - 1.0).abs() < 1e-8,
+            "{}: {cost} against {}",
+            set.name,
+            set.cost
+        );
         compared += 1;
     }
     assert_eq!(compared, 68);
