@@ -71,7 +71,7 @@ pub fn fit(points: &[Point], scatter: Scatter) -> Option<MainFit> {
         return None;
     }
     let options = bounds(&levels, peak);
-    let mut search = Search {
+    let search = Search {
         points,
         scatter,
         options,
