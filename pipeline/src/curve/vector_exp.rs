@@ -2,7 +2,8 @@
 //!
 //! `f64::exp` is a call per value; a quadrature needs dozens at once. This one has no branch and no call, so a loop
 //! over an array of values runs as many lanes as the machine has, and gives the same bits on every machine, since
-//! it uses only additions and multiplications in a fixed order.
+//! every operation is an addition, a multiplication or a fused pair of them (`mul_add`, correctly rounded wherever it
+//! runs), in a fixed order.
 
 /// Adding this to a number of moderate size rounds it to an integer, which then stands in the lowest bits.
 const ROUNDER: f64 = 6_755_399_441_055_744.0; // 1.5 * 2^52
@@ -13,10 +14,10 @@ const LN_2_LOW: f64 = 1.908_214_929_270_587_7e-10;
 #[inline(always)]
 pub fn exp(x: f64) -> f64 {
     let x = if x < -700.0 { -700.0 } else { x };
-    let rounded = x * std::f64::consts::LOG2_E + ROUNDER;
+    let rounded = x.mul_add(std::f64::consts::LOG2_E, ROUNDER);
     let k = rounded - ROUNDER;
-    let r = (x - k * LN_2_HIGH) - k * LN_2_LOW;
-    let p = 1.0 + r * growth(r);
+    let r = (-k).mul_add(LN_2_LOW, (-k).mul_add(LN_2_HIGH, x));
+    let p = r.mul_add(growth(r), 1.0);
     f64::from_bits(p.to_bits().wrapping_add(rounded.to_bits() << 52))
 }
 
@@ -26,11 +27,14 @@ pub fn growth(r: f64) -> f64 {
     // Estrin's scheme: pairs first, so that the additions do not wait for each other.
     let r2 = r * r;
     let r4 = r2 * r2;
-    let a = (1.0 + r * (1.0 / 2.0)) + r2 * (1.0 / 6.0 + r * (1.0 / 24.0));
-    let b = (1.0 / 120.0 + r * (1.0 / 720.0)) + r2 * (1.0 / 5040.0 + r * (1.0 / 40320.0));
-    let c =
-        (1.0 / 362_880.0 + r * (1.0 / 3_628_800.0)) + r2 * (1.0 / 39_916_800.0 + r * (1.0 / 479_001_600.0));
-    a + r4 * (b + r4 * c)
+    let pair = |even: f64, odd: f64| r.mul_add(odd, even);
+    let a = r2.mul_add(pair(1.0 / 6.0, 1.0 / 24.0), pair(1.0, 1.0 / 2.0));
+    let b = r2.mul_add(pair(1.0 / 5040.0, 1.0 / 40_320.0), pair(1.0 / 120.0, 1.0 / 720.0));
+    let c = r2.mul_add(
+        pair(1.0 / 39_916_800.0, 1.0 / 479_001_600.0),
+        pair(1.0 / 362_880.0, 1.0 / 3_628_800.0),
+    );
+    r4.mul_add(r4.mul_add(c, b), a)
 }
 
 #[cfg(test)]

@@ -165,6 +165,7 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
     let objective = Objective {
         levels: &fit.levels,
         chart: Chart::Ceiling,
+        rough: false,
     };
     let mut evaluations = 0;
     let mut side =
@@ -200,6 +201,7 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
     let by_half_rise = Objective {
         levels: &fit.levels,
         chart: Chart::HalfRise,
+        rough: false,
     };
     let (best, options) = in_half_rise_chart(fit, &by_half_rise);
     let back = |point: [f64; 4]| [point[0], point[1] / point[0].exp(), point[2], point[3]];

@@ -11,6 +11,9 @@ pub const PARAMETERS: usize = 4;
 /// Starts followed to the end of a short search before the best is polished.
 const STARTS_FOLLOWED: usize = 4;
 
+/// Rise of the weighted sum of squares, beyond twice the best, above which a start is not followed further.
+const HOPELESS: f64 = 10.0;
+
 /// Smallest and largest noise SD, as a fraction of the range of drives.
 const NOISE_BOUNDS: [f64; 2] = [1e-3, 10.0];
 /// Smallest and largest initial gain, as a multiple of peak rate over range of drives. The largest is that of a step:
@@ -46,7 +49,7 @@ pub struct MainFit {
 }
 
 /// The extra variance has settled once it moves by less than this fraction of the total variance.
-const SETTLED: f64 = 1e-8;
+const SETTLED: f64 = 1e-7;
 
 /// How the extra variance is set.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -86,16 +89,24 @@ pub fn fit(points: &[Point], scatter: Scatter) -> Option<MainFit> {
         max_iterations: 12,
         ..options
     };
-    let mut followed: Vec<Solution<4>> = Vec::with_capacity(STARTS_FOLLOWED);
-    for start in starts.iter().take(STARTS_FOLLOWED) {
-        followed.push(search.minimise(&levels, *start, &rough));
-    }
+    let few_nodes = Objective {
+        levels: &levels,
+        chart: Chart::Ceiling,
+        rough: true,
+    };
+    let mut followed: Vec<Solution<4>> = starts
+        .iter()
+        .take(STARTS_FOLLOWED)
+        .map(|start| minimise(&few_nodes, *start, &rough))
+        .collect();
     followed.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
     let best = *followed.first()?;
+    // A start that ended elsewhere, and not hopelessly above, may win once the weights are right.
+    let hopeless = 2.0 * best.cost() + HOPELESS;
     let rivals: Vec<[f64; 4]> = followed
         .iter()
         .skip(1)
-        .filter(|f| far_apart(f, &best))
+        .filter(|f| f.cost() < hopeless && far_apart(f, &best))
         .map(|f| f.parameters)
         .collect();
     let ramp_start = starts.iter().copied().find(|s| s[1] == 0.0);
@@ -217,7 +228,9 @@ impl Search<'_> {
             converged = self.settle(&mut levels, &mut best, &options, PARAMETERS);
             ramp = self.ramp(&levels, &best, ramp_start);
             let mut improved = false;
-            for rival in rivals.iter().chain(std::iter::once(&ramp.parameters)) {
+            // Well above the best, the ramp leads back to where the search came from.
+            let ramp_rival = (ramp.cost() < best.cost() + HOPELESS).then_some(&ramp.parameters);
+            for rival in rivals.iter().chain(ramp_rival) {
                 let found = self.minimise(&levels, *rival, &options);
                 if found.cost() < best.cost() * (1.0 - 1e-8) - 1e-14 {
                     best = found;
@@ -245,6 +258,7 @@ impl Search<'_> {
             &Objective {
                 levels,
                 chart: Chart::Ceiling,
+                rough: false,
             },
             start,
             options,
@@ -268,8 +282,7 @@ impl Search<'_> {
         let standard_errors: Vec<f64> = self.points.iter().map(|p| p.se).collect();
         let interval_variance = standard_errors.iter().map(|e| e * e).sum::<f64>() / self.points.len() as f64;
         let degrees = (self.points.len() - parameters) as f64;
-        let mut damped = 1.0;
-        let mut last_change = 0.0_f64;
+        let mut last_change = f64::INFINITY;
         for round in 0..200 {
             // Early rounds need no more than a good direction; the last ones are exact.
             let limited = SolverOptions {
@@ -281,12 +294,20 @@ impl Search<'_> {
             self.set_residuals(levels, best);
             let target = extra_variance(&self.residuals, &standard_errors, degrees);
             let change = target - self.variance;
-            // A minimum that hops to and fro with the weights is brought to rest by shorter steps.
-            if change * last_change < 0.0 && change.abs() > 0.5 * last_change.abs() {
-                damped *= 0.5;
-            }
+            // Changes shrink by a steady factor: take the sum of those to come at once (Aitken), which also brings to
+            // rest a minimum that hops to and fro with the weights.
+            let ratio = if round > 1 {
+                (change / last_change).clamp(-0.9, 0.6)
+            } else {
+                0.0
+            };
             last_change = change;
-            self.variance += damped * change;
+            let step = if ratio.is_finite() {
+                change / (1.0 - ratio)
+            } else {
+                change
+            };
+            self.variance = (self.variance + step).max(0.0);
             levels.reweigh(self.points, self.variance);
             if change.abs() <= SETTLED * (target + interval_variance) {
                 let exact = SolverOptions {

@@ -111,6 +111,8 @@ pub struct Objective<'a> {
     pub levels: &'a Levels,
     /// Meaning of the parameters.
     pub chart: Chart,
+    /// Evaluate the curve with few nodes, to choose among starts.
+    pub rough: bool,
 }
 
 impl LeastSquares<4> for Objective<'_> {
@@ -119,6 +121,7 @@ impl LeastSquares<4> for Objective<'_> {
         sums.cost = l.within;
         vectorised(EachDrive {
             chart: self.chart,
+            rough: self.rough,
             parameters,
             drives: &l.drives,
             each: Accumulate {
@@ -153,6 +156,7 @@ impl Each for Accumulate<'_> {
 /// A pass of the curve over drives.
 pub(super) struct EachDrive<'a, E> {
     pub(super) chart: Chart,
+    pub(super) rough: bool,
     pub(super) parameters: &'a [f64; 4],
     pub(super) drives: &'a [f64],
     pub(super) each: E,
@@ -174,7 +178,11 @@ impl<E: Each> Pass for EachDrive<'_, E> {
             let max_rate = 1.0 / ceiling;
             let per_half_rise = gain * ceiling;
             let s = noise * per_half_rise;
-            let kernel = Kernel::new(s);
+            let kernel = if self.rough {
+                Kernel::rough(s)
+            } else {
+                Kernel::new(s)
+            };
             for (i, drive) in self.drives.iter().enumerate() {
                 let f = kernel.at((drive - threshold) * per_half_rise);
                 let rate = max_rate * f.h;
@@ -216,6 +224,7 @@ pub fn evaluate(
 ) {
     vectorised(EachDrive {
         chart,
+        rough: false,
         parameters,
         drives,
         each: Store(&mut each),
@@ -275,6 +284,7 @@ mod tests {
         Objective {
             levels: &levels,
             chart: Chart::Ceiling,
+            rough: false,
         }
         .accumulate(&p, &mut sums);
         let mut direct = 0.0;
