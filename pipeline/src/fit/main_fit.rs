@@ -16,12 +16,16 @@ const HOPELESS: f64 = 10.0;
 
 /// Smallest and largest noise SD, as a fraction of the range of drives.
 const NOISE_BOUNDS: [f64; 2] = [1e-3, 10.0];
-/// Smallest and largest initial gain, as a multiple of peak rate over range of drives.
-const GAIN_BOUNDS: [f64; 2] = [1e-4, 1e3];
+/// Smallest and largest initial gain, as a multiple of peak rate over range of drives. The largest is that of a step:
+/// a half-rise so small that nothing in the data tells it from zero.
+const GAIN_BOUNDS: [f64; 2] = [1e-4, 1e6];
 /// Largest 1/max rate, as a multiple of 1/peak rate.
 const CEILING_BOUND: f64 = 10.0;
 /// Smallest threshold: this many ranges of drives below the smallest drive.
 const THRESHOLD_BELOW: f64 = 10.0;
+/// Largest threshold: this many ranges of drives above the largest drive. A weak cell whose noise alone makes it fire
+/// has its threshold up there.
+const THRESHOLD_ABOVE: f64 = 1.0;
 
 /// What the fit found. Parameters are in the chart [`Chart::Ceiling`].
 #[derive(Clone, Debug)]
@@ -189,7 +193,7 @@ fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
     let noise = NOISE_BOUNDS.map(|n| (n * range).ln());
     SolverOptions {
         lower: [gain[0], 0.0, lowest - THRESHOLD_BELOW * range, noise[0]],
-        upper: [gain[1], CEILING_BOUND / peak, highest, noise[1]],
+        upper: [gain[1], CEILING_BOUND / peak, highest + THRESHOLD_ABOVE * range, noise[1]],
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
         max_iterations: 400,
