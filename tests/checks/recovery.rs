@@ -113,8 +113,14 @@ fn analysed(cells: u64, without_ceiling: bool) -> Vec<(CellResult, Truth)> {
 fn intervals_cover_the_truth_and_ceilings_are_seen() {
     const CELLS: u64 = 1500;
     let results = analysed(CELLS, false);
-    let fitted = results.iter().filter(|(r, _)| r.responses[0].status == Status::Fitted).count();
-    assert!(fitted as f64 >= 0.995 * CELLS as f64, "{fitted} of {CELLS} fitted");
+    let fitted = results
+        .iter()
+        .filter(|(r, _)| r.responses[0].status == Status::Fitted)
+        .count();
+    assert!(
+        fitted as f64 >= 0.995 * CELLS as f64,
+        "{fitted} of {CELLS} fitted"
+    );
     let covers = |pick: fn(&halfrise::assess::ResponseResult) -> Estimate, truth: fn(&Truth) -> f64| {
         let mut known = 0;
         let mut hits = 0;
@@ -125,7 +131,10 @@ fn intervals_cover_the_truth_and_ceilings_are_seen() {
                 hits += usize::from(lo <= truth(t) && truth(t) <= hi);
             }
         }
-        assert!(known as f64 >= 0.99 * fitted as f64, "{known} intervals of {fitted}");
+        assert!(
+            known as f64 >= 0.99 * fitted as f64,
+            "{known} intervals of {fitted}"
+        );
         hits as f64 / known as f64
     };
     for (name, coverage) in [
@@ -133,7 +142,10 @@ fn intervals_cover_the_truth_and_ceilings_are_seen() {
         ("half-rise", covers(|r| r.half_rise, |t| t.half_rise)),
         ("threshold", covers(|r| r.threshold, |t| t.threshold)),
         ("noise SD", covers(|r| r.noise_sd, |t| t.noise_sd)),
-        ("initial gain", covers(|r| r.initial_gain, |t| t.max_rate / t.half_rise)),
+        (
+            "initial gain",
+            covers(|r| r.initial_gain, |t| t.max_rate / t.half_rise),
+        ),
     ] {
         println!("{name}: {:.1} %", 100.0 * coverage);
         assert!((0.93..=0.975).contains(&coverage), "{name}: {coverage}");
@@ -144,14 +156,21 @@ fn intervals_cover_the_truth_and_ceilings_are_seen() {
         .filter(|(r, _)| matches!(r.responses[0].ceiling, Some(Ceiling::Resolved | Ceiling::Loose)))
         .count();
     println!("closed: {closed} of {}", reached.len());
-    assert!(closed as f64 >= 0.95 * reached.len() as f64, "{closed} of {}", reached.len());
+    assert!(
+        closed as f64 >= 0.95 * reached.len() as f64,
+        "{closed} of {}",
+        reached.len()
+    );
 }
 
 #[test]
 fn cells_without_a_ceiling_are_called_open() {
     const CELLS: u64 = 600;
     let results = analysed(CELLS, true);
-    let other = results.iter().filter(|(r, _)| r.responses[0].ceiling != Some(Ceiling::Open)).count();
+    let other = results
+        .iter()
+        .filter(|(r, _)| r.responses[0].ceiling != Some(Ceiling::Open))
+        .count();
     println!("not open: {other} of {CELLS}");
     assert!(other as f64 <= 0.08 * CELLS as f64, "{other} of {CELLS} not open");
 }

@@ -11,8 +11,14 @@ pub const PARAMETERS: usize = 4;
 /// Starts followed to the end of a short search before the best is polished.
 const STARTS_FOLLOWED: usize = 4;
 
+/// Squared distance, in standard deviations, below which two ends of the short search are the same minimum.
+const SAME: f64 = 0.05;
+
 /// Rise of the weighted sum of squares, beyond twice the best, above which a start is not followed further.
 const HOPELESS: f64 = 10.0;
+
+/// Variance of ln noise SD above which the search also tries a smaller and a larger noise.
+const LOOSE_NOISE: f64 = 0.1;
 
 /// Smallest and largest noise SD, as a fraction of the range of drives.
 const NOISE_BOUNDS: [f64; 2] = [1e-3, 10.0];
@@ -183,7 +189,7 @@ fn far_apart(a: &Solution<4>, b: &Solution<4>) -> bool {
         }
     }
     // NaN counts as far.
-    !(distance <= 1.0)
+    !(distance <= SAME)
 }
 
 fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
@@ -193,7 +199,12 @@ fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
     let noise = NOISE_BOUNDS.map(|n| (n * range).ln());
     SolverOptions {
         lower: [gain[0], 0.0, lowest - THRESHOLD_BELOW * range, noise[0]],
-        upper: [gain[1], CEILING_BOUND / peak, highest + THRESHOLD_ABOVE * range, noise[1]],
+        upper: [
+            gain[1],
+            CEILING_BOUND / peak,
+            highest + THRESHOLD_ABOVE * range,
+            noise[1],
+        ],
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
         max_iterations: 400,
@@ -230,7 +241,18 @@ impl Search<'_> {
             let mut improved = false;
             // Well above the best, the ramp leads back to where the search came from.
             let ramp_rival = (ramp.cost() < best.cost() + HOPELESS).then_some(&ramp.parameters);
-            for rival in rivals.iter().chain(ramp_rival) {
+            // A noise SD below the spacing of the levels is known loosely and may have a second minimum.
+            let loose = covariance(&best).is_none_or(|c| c[3][3] > LOOSE_NOISE || best.at_bound[3]);
+            let other_noise: Vec<[f64; 4]> = [-1.0, 1.0]
+                .iter()
+                .filter(|_| loose)
+                .map(|shift| {
+                    let mut start = best.parameters;
+                    start[3] += shift;
+                    start
+                })
+                .collect();
+            for rival in rivals.iter().chain(ramp_rival).chain(&other_noise) {
                 let found = self.minimise(&levels, *rival, &options);
                 if found.cost() < best.cost() * (1.0 - 1e-8) - 1e-14 {
                     best = found;

@@ -145,7 +145,13 @@ struct LevenbergMarquardt<const P: usize> {
     growth: f64,
     converged: bool,
     evaluations: u64,
+    /// Accepted steps in a row that each gained less than the tolerance.
+    stalled: u32,
 }
+
+/// A valley without a floor, such as a noise SD that sinks to nothing, promises more for ever: after this many steps in
+/// a row that each lowered the cost by less than the tolerance the search has arrived.
+const STALLED_STEPS: u32 = 8;
 
 impl<const P: usize> LevenbergMarquardt<P> {
     fn evaluate<L: LeastSquares<P>>(
@@ -332,6 +338,9 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
         if cost == 0.0 || !free.contains(&true) {
             return stop(self, state, true);
         }
+        if self.stalled >= STALLED_STEPS {
+            return stop(self, state, true);
+        }
         // What an undamped step promises: the Newton decrement, scale free.
         let promise = self
             .step(&free, 0.0)
@@ -376,6 +385,11 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
             if sums.is_finite() && actual > 0.0 && predicted > 0.0 {
                 let gain = actual / predicted;
                 self.sums = sums;
+                self.stalled = if actual <= self.options.decrease_tolerance * cost {
+                    self.stalled + 1
+                } else {
+                    0
+                };
                 self.rescale();
                 self.damping *= (1.0 - (2.0 * gain - 1.0).powi(3)).max(1.0 / 3.0);
                 self.growth = 2.0;
@@ -429,6 +443,7 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
         growth: 2.0,
         converged: false,
         evaluations: 0,
+        stalled: 0,
     };
     let run = Executor::new(problem, solver)
         .configure(|state| {
