@@ -133,7 +133,15 @@ pub fn default_folder(set: &Path) -> PathBuf {
 pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     let stopped = || job.cancel.load(Ordering::Relaxed);
     let out = job.out.map_or_else(|| default_folder(job.set), Path::to_path_buf);
-    // A taken folder is said before the work, not after it.
+    // A taken folder is said before the work, not after it; but for a set that is not there nothing is created.
+    if !job.set.is_dir() {
+        read(
+            job.set,
+            &ReadOptions {
+                cancel: Some(job.cancel),
+            },
+        )?;
+    }
     let folder = ResultFolder::prepare(&out, job.overwrite)?;
     (job.progress)(Progress::Reading);
     let mut set = match read(

@@ -81,17 +81,30 @@ impl TextFile {
                 "write the header and the rows",
             ));
         }
-        let layout = Layout::of(file, &bytes, start, separator)?;
+        let layout = Layout::of(file, &bytes, start, separator);
         let mut text = Self {
             name: file.name.clone(),
             separator,
-            quoted: layout.quoted,
-            ends: layout.ends,
-            body: layout.header_end,
+            quoted: false,
+            ends: Vec::new(),
+            body: bytes
+                .iter()
+                .skip(start)
+                .position(|b| *b == b'\n')
+                .map_or(bytes.len(), |at| start + at + 1),
             headers: Vec::new(),
             decimal_comma,
             bytes,
         };
+        match layout {
+            Ok(layout) => {
+                text.quoted = layout.quoted;
+                text.ends = layout.ends;
+                text.body = layout.header_end;
+            }
+            // Quotes look broken when fields are cut at the wrong mark: that is then the trouble to name.
+            Err(broken) => return Err(text.other_separator(file, set, start).unwrap_or(broken)),
+        }
         text.headers = text.read_header(start)?;
         text.check_separator(file, set, start)?;
         Ok(text)
@@ -117,9 +130,14 @@ impl TextFile {
 
     /// Names a separator other than the one expected, with the lines that read it.
     fn check_separator(&self, file: &TableFile, set: &SetFile, start: usize) -> Result<(), ReadError> {
-        let Err(error) = match_headers(file, &self.headers, set) else {
-            return Ok(());
-        };
+        match match_headers(file, &self.headers, set) {
+            Ok(_) => Ok(()),
+            Err(error) => Err(self.other_separator(file, set, start).unwrap_or(error)),
+        }
+    }
+
+    /// The error that names another separator, where one makes sense of the header.
+    fn other_separator(&self, file: &TableFile, set: &SetFile, start: usize) -> Option<ReadError> {
         let line = String::from_utf8_lossy(&self.bytes[start..self.body]);
         for (separator, name) in [
             (b';', "semicolons"),
@@ -149,13 +167,13 @@ impl TextFile {
                 what.push_str(" and its numbers have decimal commas, as some spreadsheets export them");
                 lines.push_str("\ndecimal = \",\"");
             }
-            return Err(data(
+            return Some(data(
                 file,
                 &what,
                 &format!("to read it so, add to {SET_FILE}:\n{lines}"),
             ));
         }
-        Err(error)
+        None
     }
 
     /// Gives every stretch of rows to `each`, in order.
