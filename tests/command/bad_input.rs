@@ -6,11 +6,11 @@ use crate::support::{Made, column, halfrise, text};
 
 #[test]
 fn a_folder_that_is_not_there() {
-    halfrise(&["fit", "no/such/folder", "--out", "no/where"]).fails(1, &["no/such/folder"]);
-    assert!(
-        !std::path::Path::new("no").exists(),
-        "a failed run leaves nothing behind"
-    );
+    let home = tempfile::tempdir().unwrap();
+    let out = home.path().join("no/where");
+    halfrise(&["fit", "no/such/folder", "--out", text(&out)]).fails(1, &["no/such/folder"]);
+    let left = std::fs::read_dir(home.path()).unwrap().count();
+    assert_eq!(left, 0, "a failed run leaves nothing behind");
 }
 
 #[test]

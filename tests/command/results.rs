@@ -152,7 +152,7 @@ fn units_do_not_change_the_answer() {
         "max_rate_Hz",
         "half_rise",
         "threshold_lo",
-        "noise_sd",
+        "extra_sd_Hz",
         "initial_gain_hi",
     ] {
         let a = column(&made.out().join("parameters.parquet"), name);
