@@ -186,6 +186,32 @@ fn far_apart(a: &Solution<4>, b: &Solution<4>) -> bool {
     !(distance <= 1.0)
 }
 
+/// Factor between a noise SD and the ones tried beside it.
+const NOISE_PROBE: f64 = 3.0;
+
+/// Where noise is small against the step from one drive to the next, a single level at the threshold may tell of it,
+/// and does so twice: by a threshold below with little noise, and by one above with more. Each is a minimum; starts
+/// from the other side of the one that was found.
+fn noise_probes(levels: &Levels, best: &Solution<4>) -> [Option<[f64; 4]>; 2] {
+    let [.., threshold, ln_noise] = best.parameters;
+    let above = levels.drives.partition_point(|d| *d < threshold);
+    let spacing = match (
+        above.checked_sub(1).and_then(|i| levels.drives.get(i)),
+        levels.drives.get(above),
+    ) {
+        (Some(low), Some(high)) => high - low,
+        _ => return [None, None],
+    };
+    if ln_noise.exp() >= spacing {
+        return [None, None];
+    }
+    [-NOISE_PROBE.ln(), NOISE_PROBE.ln()].map(|shift| {
+        let mut probe = best.parameters;
+        probe[3] += shift;
+        Some(probe)
+    })
+}
+
 fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
     let (lowest, highest) = (levels.drives[0], levels.drives[levels.drives.len() - 1]);
     let range = highest - lowest;
@@ -193,9 +219,15 @@ fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
     let noise = NOISE_BOUNDS.map(|n| (n * range).ln());
     SolverOptions {
         lower: [gain[0], 0.0, lowest - THRESHOLD_BELOW * range, noise[0]],
-        upper: [gain[1], CEILING_BOUND / peak, highest + THRESHOLD_ABOVE * range, noise[1]],
+        upper: [
+            gain[1],
+            CEILING_BOUND / peak,
+            highest + THRESHOLD_ABOVE * range,
+            noise[1],
+        ],
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
+        stall_tolerance: 1e-9,
         max_iterations: 400,
         stride: [1.0, 0.5 / peak, 0.25 * range, 1.0],
         ..SolverOptions::default()
@@ -230,7 +262,8 @@ impl Search<'_> {
             let mut improved = false;
             // Well above the best, the ramp leads back to where the search came from.
             let ramp_rival = (ramp.cost() < best.cost() + HOPELESS).then_some(&ramp.parameters);
-            for rival in rivals.iter().chain(ramp_rival) {
+            let probes = noise_probes(&levels, &best);
+            for rival in rivals.iter().chain(ramp_rival).chain(probes.iter().flatten()) {
                 let found = self.minimise(&levels, *rival, &options);
                 if found.cost() < best.cost() * (1.0 - 1e-8) - 1e-14 {
                     best = found;

@@ -87,6 +87,10 @@ pub struct SolverOptions<const P: usize> {
     pub decrease_tolerance: f64,
     /// Converged once every step is below this fraction of its parameter.
     pub step_tolerance: f64,
+    /// Converged once [`STALL_ITERATIONS`] accepted steps in a row lowered the cost by less than this fraction of it
+    /// altogether, whatever the quadratic model still promises: next to a kink of the curve, where the noise is small,
+    /// it promises for ever. Zero switches the rule off.
+    pub stall_tolerance: f64,
     /// Iterations after which the solver gives up.
     pub max_iterations: u64,
     /// Longest step of a profile in each parameter, where curvature alone would leap further than it can be trusted.
@@ -103,6 +107,7 @@ impl<const P: usize> Default for SolverOptions<P> {
             fixed: [false; P],
             decrease_tolerance: 1e-22,
             step_tolerance: 1e-14,
+            stall_tolerance: 0.0,
             max_iterations: 2000,
             stride: [f64::INFINITY; P],
             initial_damping: 1e-3,
@@ -136,9 +141,14 @@ impl<const P: usize> Solution<P> {
 
 type LmState<const P: usize> = IterState<[f64; P], (), (), (), (), f64>;
 
+/// Accepted steps over which [`SolverOptions::stall_tolerance`] is judged.
+pub const STALL_ITERATIONS: u32 = 12;
+
 /// The solver itself; its working values live here, argmin's state carries parameters and cost.
 struct LevenbergMarquardt<const P: usize> {
     options: SolverOptions<P>,
+    accepted: u32,
+    cost_then: f64,
     sums: NormalSums<P>,
     scale: [f64; P],
     damping: f64,
@@ -332,6 +342,15 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
         if cost == 0.0 || !free.contains(&true) {
             return stop(self, state, true);
         }
+        // Every pass through here has an accepted step behind it, but for the first.
+        if self.accepted >= STALL_ITERATIONS {
+            if self.cost_then - cost < self.options.stall_tolerance * cost {
+                return stop(self, state, true);
+            }
+            self.accepted = 0;
+            self.cost_then = cost;
+        }
+        self.accepted += 1;
         // What an undamped step promises: the Newton decrement, scale free.
         let promise = self
             .step(&free, 0.0)
@@ -423,6 +442,8 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
     });
     let solver = LevenbergMarquardt {
         options: *options,
+        accepted: 0,
+        cost_then: f64::INFINITY,
         sums: NormalSums::default(),
         scale: [0.0; P],
         damping: options.initial_damping,
