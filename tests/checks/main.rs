@@ -9,6 +9,7 @@ mod hyperbola;
 mod integrate_and_fire;
 mod intervals;
 mod nist;
+mod recovery;
 mod referee;
 mod smoothed_hyperbola;
 mod support;

@@ -11,8 +11,14 @@ pub const PARAMETERS: usize = 4;
 /// Starts followed to the end of a short search before the best is polished.
 const STARTS_FOLLOWED: usize = 4;
 
+/// Squared distance, in standard deviations, below which two ends of the short search are the same minimum.
+const SAME: f64 = 0.05;
+
 /// Rise of the weighted sum of squares, beyond twice the best, above which a start is not followed further.
 const HOPELESS: f64 = 10.0;
+
+/// Variance of ln noise SD above which the search also tries a smaller and a larger noise.
+const LOOSE_NOISE: f64 = 0.1;
 
 /// Smallest and largest noise SD, as a fraction of the range of drives.
 const NOISE_BOUNDS: [f64; 2] = [1e-3, 10.0];
@@ -75,7 +81,7 @@ pub fn fit(points: &[Point], scatter: Scatter) -> Option<MainFit> {
         return None;
     }
     let options = bounds(&levels, peak);
-    let mut search = Search {
+    let search = Search {
         points,
         scatter,
         options,
@@ -183,33 +189,7 @@ fn far_apart(a: &Solution<4>, b: &Solution<4>) -> bool {
         }
     }
     // NaN counts as far.
-    !(distance <= 1.0)
-}
-
-/// Factor between a noise SD and the ones tried beside it.
-const NOISE_PROBE: f64 = 3.0;
-
-/// Where noise is small against the step from one drive to the next, a single level at the threshold may tell of it,
-/// and does so twice: by a threshold below with little noise, and by one above with more. Each is a minimum; starts
-/// from the other side of the one that was found.
-fn noise_probes(levels: &Levels, best: &Solution<4>) -> [Option<[f64; 4]>; 2] {
-    let [.., threshold, ln_noise] = best.parameters;
-    let above = levels.drives.partition_point(|d| *d < threshold);
-    let spacing = match (
-        above.checked_sub(1).and_then(|i| levels.drives.get(i)),
-        levels.drives.get(above),
-    ) {
-        (Some(low), Some(high)) => high - low,
-        _ => return [None, None],
-    };
-    if ln_noise.exp() >= spacing {
-        return [None, None];
-    }
-    [-NOISE_PROBE.ln(), NOISE_PROBE.ln()].map(|shift| {
-        let mut probe = best.parameters;
-        probe[3] += shift;
-        Some(probe)
-    })
+    !(distance <= SAME)
 }
 
 fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
@@ -227,7 +207,6 @@ fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
         ],
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
-        stall_tolerance: 1e-9,
         max_iterations: 400,
         stride: [1.0, 0.5 / peak, 0.25 * range, 1.0],
         ..SolverOptions::default()
@@ -262,8 +241,18 @@ impl Search<'_> {
             let mut improved = false;
             // Well above the best, the ramp leads back to where the search came from.
             let ramp_rival = (ramp.cost() < best.cost() + HOPELESS).then_some(&ramp.parameters);
-            let probes = noise_probes(&levels, &best);
-            for rival in rivals.iter().chain(ramp_rival).chain(probes.iter().flatten()) {
+            // A noise SD below the spacing of the levels is known loosely and may have a second minimum.
+            let loose = covariance(&best).is_none_or(|c| c[3][3] > LOOSE_NOISE || best.at_bound[3]);
+            let other_noise: Vec<[f64; 4]> = [-1.0, 1.0]
+                .iter()
+                .filter(|_| loose)
+                .map(|shift| {
+                    let mut start = best.parameters;
+                    start[3] += shift;
+                    start
+                })
+                .collect();
+            for rival in rivals.iter().chain(ramp_rival).chain(&other_noise) {
                 let found = self.minimise(&levels, *rival, &options);
                 if found.cost() < best.cost() * (1.0 - 1e-8) - 1e-14 {
                     best = found;

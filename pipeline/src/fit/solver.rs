@@ -87,10 +87,6 @@ pub struct SolverOptions<const P: usize> {
     pub decrease_tolerance: f64,
     /// Converged once every step is below this fraction of its parameter.
     pub step_tolerance: f64,
-    /// Converged once [`STALL_ITERATIONS`] accepted steps in a row lowered the cost by less than this fraction of it
-    /// altogether, whatever the quadratic model still promises: next to a kink of the curve, where the noise is small,
-    /// it promises for ever. Zero switches the rule off.
-    pub stall_tolerance: f64,
     /// Iterations after which the solver gives up.
     pub max_iterations: u64,
     /// Longest step of a profile in each parameter, where curvature alone would leap further than it can be trusted.
@@ -107,7 +103,6 @@ impl<const P: usize> Default for SolverOptions<P> {
             fixed: [false; P],
             decrease_tolerance: 1e-22,
             step_tolerance: 1e-14,
-            stall_tolerance: 0.0,
             max_iterations: 2000,
             stride: [f64::INFINITY; P],
             initial_damping: 1e-3,
@@ -141,21 +136,22 @@ impl<const P: usize> Solution<P> {
 
 type LmState<const P: usize> = IterState<[f64; P], (), (), (), (), f64>;
 
-/// Accepted steps over which [`SolverOptions::stall_tolerance`] is judged.
-pub const STALL_ITERATIONS: u32 = 12;
-
 /// The solver itself; its working values live here, argmin's state carries parameters and cost.
 struct LevenbergMarquardt<const P: usize> {
     options: SolverOptions<P>,
-    accepted: u32,
-    cost_then: f64,
     sums: NormalSums<P>,
     scale: [f64; P],
     damping: f64,
     growth: f64,
     converged: bool,
     evaluations: u64,
+    /// Accepted steps in a row that each gained less than the tolerance.
+    stalled: u32,
 }
+
+/// A valley without a floor, such as a noise SD that sinks to nothing, promises more for ever: after this many steps in
+/// a row that each lowered the cost by less than the tolerance the search has arrived.
+const STALLED_STEPS: u32 = 8;
 
 impl<const P: usize> LevenbergMarquardt<P> {
     fn evaluate<L: LeastSquares<P>>(
@@ -342,15 +338,9 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
         if cost == 0.0 || !free.contains(&true) {
             return stop(self, state, true);
         }
-        // Every pass through here has an accepted step behind it, but for the first.
-        if self.accepted >= STALL_ITERATIONS {
-            if self.cost_then - cost < self.options.stall_tolerance * cost {
-                return stop(self, state, true);
-            }
-            self.accepted = 0;
-            self.cost_then = cost;
+        if self.stalled >= STALLED_STEPS {
+            return stop(self, state, true);
         }
-        self.accepted += 1;
         // What an undamped step promises: the Newton decrement, scale free.
         let promise = self
             .step(&free, 0.0)
@@ -395,6 +385,11 @@ impl<const P: usize, L: LeastSquares<P>> Solver<L, LmState<P>> for LevenbergMarq
             if sums.is_finite() && actual > 0.0 && predicted > 0.0 {
                 let gain = actual / predicted;
                 self.sums = sums;
+                self.stalled = if actual <= self.options.decrease_tolerance * cost {
+                    self.stalled + 1
+                } else {
+                    0
+                };
                 self.rescale();
                 self.damping *= (1.0 - (2.0 * gain - 1.0).powi(3)).max(1.0 / 3.0);
                 self.growth = 2.0;
@@ -442,14 +437,13 @@ pub fn minimise<const P: usize, L: LeastSquares<P>>(
     });
     let solver = LevenbergMarquardt {
         options: *options,
-        accepted: 0,
-        cost_then: f64::INFINITY,
         sums: NormalSums::default(),
         scale: [0.0; P],
         damping: options.initial_damping,
         growth: 2.0,
         converged: false,
         evaluations: 0,
+        stalled: 0,
     };
     let run = Executor::new(problem, solver)
         .configure(|state| {

@@ -49,7 +49,10 @@ pub(super) fn short_interval(e: &Evidence<'_>) -> Option<Flag> {
 pub(super) fn faster_than_intervals(e: &Evidence<'_>) -> Option<Flag> {
     // The lower bound where there is one: the ceiling itself lies above every rate measured.
     let estimate = e.estimates?.max_rate;
-    let max_rate = estimate.lo.or(estimate.value)?;
+    let max_rate = estimate
+        .lo
+        .or(estimate.value)
+        .filter(|_| estimate.value.is_some())?;
     let limit = 1.0 / shortest_interval(e)?;
     if max_rate <= limit {
         return None;
@@ -104,7 +107,7 @@ pub(super) fn stops_early(e: &Evidence<'_>) -> Option<Flag> {
         e.settings.stop_intervals,
         format!(
             "in {} steps firing stopped before half time; their interval rate tells of the burst, not of the step \
-             (the response `steady` shows it)",
+             (the steady response shows it)",
             steps.len()
         ),
     )
