@@ -69,7 +69,9 @@ def draw_cell(seed, number, arguments):
         "gamma_shape": shape,
         "steps": steps,
     }
-    rates = np.maximum(rates + arguments.extra_sd * random.standard_normal(steps), 0.0)
+    # A rate cannot be negative: below three SDs the scatter shrinks with it, so that its mean stays the curve's.
+    scatter = np.minimum(arguments.extra_sd, rates / 3)
+    rates = np.maximum(rates + scatter * random.standard_normal(steps), 0.0)
     return truth, drives, rates, shape, random
 
 

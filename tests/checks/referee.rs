@@ -122,7 +122,7 @@ fn the_referee_finds_no_better_fit() {
         let excess = found.solution.cost() / set.cost - 1.0;
         let p = found.solution.parameters;
         let line = format!(
-            "{}: {:.9} against {:.9}, {excess:+.1e}; max rate {:.5}, gain {:.5}, threshold {:.4}, noise {:.4}, at bound {:?}; referee {}",
+            "{}: {:.9} against {:.9}, {excess:+.1e}; max rate {:.5}, gain {:.5}, threshold {:.4}, noise {:.4}, at bound {:?}, iterations {}; referee {}",
             set.name,
             found.solution.cost(),
             set.cost,
@@ -131,6 +131,7 @@ fn the_referee_finds_no_better_fit() {
             p[2],
             p[3].exp(),
             found.solution.at_bound,
+            found.solution.iterations,
             set.best
         );
         println!("{line}");
