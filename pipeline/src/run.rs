@@ -25,6 +25,9 @@ use crate::tables::{Counts, Provenance, ResultFolder, TableContext, Tables, Writ
 /// Cells analysed, written and forgotten together: memory does not grow with the set's results.
 const CELLS_AT_ONCE: usize = 1024;
 
+/// In a set of more cells than this, a cell without a single interval gets no figure.
+const CELLS_ALL_DRAWN: usize = 5000;
+
 /// What to do.
 pub struct Job<'a> {
     /// The recording set's folder.
@@ -175,39 +178,55 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
             .map_err(|e| WriteError::of_io(&figures, "cannot be created", &e))?;
     }
 
-    let mut cells = std::mem::take(&mut set.cells);
+    let cells = std::mem::take(&mut set.cells);
     (job.progress)(Progress::Cells(cells.len() as u64));
-    while !cells.is_empty() {
+    // In a very large set a picture of nothing is not worth its file.
+    let draw_all = cells.len() <= CELLS_ALL_DRAWN;
+    let mut cells = cells.into_iter();
+    loop {
+        let batch: Vec<CellRecording> = cells.by_ref().take(CELLS_AT_ONCE).collect();
+        if batch.is_empty() {
+            break;
+        }
         if stopped() {
             return Err(RunError::Interrupted);
         }
-        let rest = cells.split_off(cells.len().min(CELLS_AT_ONCE));
-        let batch = std::mem::replace(&mut cells, rest);
         let figure_names: Vec<Option<String>> = batch
             .iter()
             .map(|cell| (draw && !cell.steps.is_empty()).then(|| names.name(&cell.id.0)))
             .collect();
-        let results: Vec<CellResult> = batch
+        let analysed: Vec<(CellResult, Option<String>)> = batch
             .par_iter()
-            .zip(&figure_names)
-            .map(|(cell, figure)| -> Result<CellResult, RunError> {
-                if stopped() {
-                    return Err(RunError::Interrupted);
-                }
-                let result = analyse_cell(cell, &settings, job.rates_only);
-                if let Some(name) = figure
-                    && let Some(svg) = cell_figure(&result)
-                {
-                    write_text(&figures.join(name), &svg)?;
-                }
-                (job.progress)(Progress::Done(1));
-                Ok(result)
-            })
+            .zip(figure_names)
+            .map(
+                |(cell, figure)| -> Result<(CellResult, Option<String>), RunError> {
+                    if stopped() {
+                        return Err(RunError::Interrupted);
+                    }
+                    let result = analyse_cell(cell, &settings, job.rates_only);
+                    let shows = draw_all
+                        || result
+                            .responses
+                            .iter()
+                            .flat_map(|r| &r.rates)
+                            .any(|r| r.intervals > 0);
+                    let mut drawn = None;
+                    if let Some(name) = figure.filter(|_| shows)
+                        && let Some(svg) = cell_figure(&result)
+                    {
+                        write_text(&figures.join(&name), &svg)?;
+                        drawn = Some(name);
+                    }
+                    (job.progress)(Progress::Done(1));
+                    Ok((result, drawn))
+                },
+            )
             .collect::<Result<_, _>>()?;
         drop(batch);
+        let (results, drawn): (Vec<CellResult>, Vec<Option<String>>) = analysed.into_iter().unzip();
         tables.write(&results)?;
         counts.add(&results);
-        for (result, figure) in results.iter().zip(&figure_names) {
+        for (result, figure) in results.iter().zip(&drawn) {
             summary.add(result, figure.as_deref());
         }
     }
