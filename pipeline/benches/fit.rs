@@ -37,13 +37,13 @@ impl Pass for Many<'_> {
     #[inline(always)]
     fn run(self) -> f64 {
         let kernel = Kernel::new(self.s);
-        self.z
-            .iter()
-            .map(|z| {
-                let f = kernel.at(*z);
-                f.h + f.dh_dz + f.bend + f.excess + f.dh_dlns
-            })
-            .sum()
+        // A plain loop: a closure handed to an iterator may stay outside what is compiled for wide vectors.
+        let mut sum = 0.0;
+        for z in self.z {
+            let f = kernel.at(*z);
+            sum += f.h + f.dh_dz + f.bend + f.excess + f.dh_dlns;
+        }
+        sum
     }
 }
 
