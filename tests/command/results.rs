@@ -272,3 +272,22 @@ fn an_interrupted_run_leaves_earlier_results() {
         "nothing hidden is left"
     );
 }
+
+#[test]
+fn a_recording_set_inside_an_earlier_result_folder_survives_overwriting() {
+    let made = Made::healthy();
+    made.fit(&[]).succeeds();
+    let inside = made.out().join("myset");
+    std::fs::rename(made.set(), &inside).unwrap();
+    let said = halfrise(&[
+        "fit",
+        text(&inside),
+        "--out",
+        text(&made.out()),
+        "--overwrite",
+        "--no-figures",
+    ]);
+    said.fails(2, &["myset", "--out"]);
+    assert!(inside.join("spikes.csv").exists() && inside.join("protocol.csv").exists());
+    assert!(made.out().join("parameters.parquet").exists());
+}

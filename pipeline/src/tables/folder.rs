@@ -37,7 +37,8 @@ impl ResultFolder {
     ///
     /// # Errors
     /// [`WriteErrorClass::Exists`](super::WriteErrorClass::Exists): `out` is a file, holds the tables of a recording
-    /// set, or is not empty, unless `overwrite` is set and it holds a `run.json` of this program.
+    /// set, itself or in a folder below, or is not empty, unless `overwrite` is set and it holds a `run.json` of this
+    /// program.
     /// [`WriteErrorClass::Io`](super::WriteErrorClass::Io): a folder cannot be looked at or created.
     pub fn prepare(out: &Path, overwrite: bool) -> Result<Self, WriteError> {
         let out = resolve(out)?;
@@ -200,7 +201,34 @@ fn check(out: &Path, overwrite: bool) -> Result<(), WriteError> {
             "choose another folder with --out, or empty this one by hand",
         );
     }
+    // Replacing a folder removes all that is below it, recordings put there since included.
+    if let Some(table) = set_table_below(out)? {
+        let shown = table.strip_prefix(out).unwrap_or(&table).display().to_string();
+        return taken(
+            format!("holds a recording set ({shown}), so it is not replaced even with --overwrite"),
+            "move the recordings out of it, or choose another folder with --out",
+        );
+    }
     Ok(())
+}
+
+/// A table or settings file of a recording set anywhere below `folder`. Links are not followed: replacing a folder
+/// removes a link, never what it leads to.
+fn set_table_below(folder: &Path) -> Result<Option<PathBuf>, WriteError> {
+    let mut waiting = vec![folder.to_path_buf()];
+    while let Some(place) = waiting.pop() {
+        let failed = |error: io::Error| WriteError::of_io(&place, "cannot be opened", &error);
+        for entry in fs::read_dir(&place).map_err(failed)? {
+            let entry = entry.map_err(failed)?;
+            if is_set_table(&entry.file_name().to_string_lossy()) {
+                return Ok(Some(entry.path()));
+            }
+            if entry.file_type().map_err(failed)?.is_dir() {
+                waiting.push(entry.path());
+            }
+        }
+    }
+    Ok(None)
 }
 
 fn is_set_table(name: &str) -> bool {

@@ -820,6 +820,35 @@ fn what_must_not_be_replaced_is_not() {
         assert!(error.to_string().contains("--out"), "{error}");
         assert_eq!(names_in(place.path()), before);
     }
+    // Recordings anywhere below results of ours would be removed with them.
+    for (name, inside, file) in [
+        ("parent", "recordings", "protocol.tsv.zst"),
+        ("ancestor", "a/b/c", "recording.toml"),
+    ] {
+        put(&at(name), "run.json", OURS);
+        put(&at(name).join(inside), file, "mine");
+        let error = ResultFolder::prepare(&at(name), true).unwrap_err();
+        assert_eq!(error.class(), WriteErrorClass::Exists, "{error}");
+        let told = Path::new(inside).join(file).display().to_string();
+        assert!(
+            error.to_string().contains(&told) && error.to_string().contains("move the recordings"),
+            "{error}"
+        );
+        assert_eq!(
+            fs::read_to_string(at(name).join(inside).join(file)).unwrap(),
+            "mine"
+        );
+    }
+    // Put there while the run went on: kept too, and the old results with them.
+    let folder = ResultFolder::prepare(&at("results"), true).unwrap();
+    put(&at("results").join("late"), "spikes.csv", "mine");
+    assert_eq!(folder.commit().unwrap_err().class(), WriteErrorClass::Exists);
+    assert_eq!(names_in(&at("results")), ["late", "run.json"]);
+    assert_eq!(
+        fs::read_to_string(at("results").join("late/spikes.csv")).unwrap(),
+        "mine"
+    );
+
     let below_file = ResultFolder::prepare(&at("file").join("out"), false).unwrap_err();
     assert_eq!(below_file.class(), WriteErrorClass::Io);
     ResultFolder::prepare(&at("empty"), false)
