@@ -145,6 +145,16 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
             },
         )?;
     }
+    // Replacing the folder would take the set away with it, whatever its files are called.
+    if let (Ok(set), Ok(place)) = (std::fs::canonicalize(job.set), std::fs::canonicalize(&out))
+        && set.starts_with(&place)
+    {
+        return Err(RunError::Write(WriteError::Exists {
+            path: out,
+            cause: format!("holds the recording set {} itself", job.set.display()),
+            remedy: "choose a folder outside the set with --out".into(),
+        }));
+    }
     let folder = ResultFolder::prepare(&out, job.overwrite)?;
     (job.progress)(Progress::Reading);
     let mut set = match read(
