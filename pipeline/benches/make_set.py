@@ -7,13 +7,16 @@ that of a process under way) at the rate of the smoothed hyperbola, or of the sm
     rate = R E[H((drive - threshold + noise X)/K)], H(u) = u/(1+u) for u > 0 and 0 otherwise, X standard normal
 
 Drawn uniformly: R 40-200 Hz, K 50-400 pA, threshold 50-250 pA, noise SD 5-60 pA, 20-80 steps (or --steps) evenly from 0
-to where the curve reaches 35-95 % of R, gamma shape 4-20. Ramps: initial gain 0.1-0.8 Hz/pA, up to 200-800 pA above
-threshold. A cell depends on the seed and its number only, so that a smaller set is the beginning of a larger one.
+to where the curve reaches 35-95 % of R, gamma shape 4-20. Ramps: up to 200-800 pA above threshold, where the rate is
+45-75 Hz. A cell depends on the seed, its number and the options only, so that a smaller set is the beginning of a
+larger one.
 
-Writes spikes.parquet (cell, sweep, time in s), protocol.parquet (cell, sweep, onset, offset in s, current in pA) and,
-for nobody but the judge, truth.parquet. Needs numpy, scipy, pyarrow.
+Writes spikes.parquet (cell, sweep, time in s), sorted, and protocol.parquet (cell, sweep, onset, offset in s, current
+in pA). Times are whole multiples of 10 us, no two alike in a sweep. The truth goes to a file outside the set, by default
+beside it (OUT-truth.parquet), for nobody but the judge. Needs numpy, scipy, pyarrow.
 
     python make_set.py OUT --cells 1000 --steps 40
+    python make_set.py OUT --cells 300 --steps 20:80 --truth TRUTH.parquet
 """
 import argparse
 import pathlib
@@ -23,7 +26,8 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 from scipy.special import ndtr
 
-ONSET_S = 0.1
+TICKS_PER_S = 100_000
+ONSET_S = 0.2
 NODES, WEIGHTS = np.polynomial.legendre.leggauss(96)
 
 
@@ -48,14 +52,17 @@ def draw_cell(seed, number, arguments):
     """One cell: its truth, drives, true rates and the generator that goes on to its spikes."""
     random = np.random.default_rng([seed, number])
     threshold, noise, shape = random.uniform(50, 250), random.uniform(5, 60), random.uniform(4, 20)
-    steps = arguments.steps or int(random.integers(20, 81))
+    fewest, most = arguments.steps
+    steps = fewest if fewest == most else int(random.integers(fewest, most + 1))
     if arguments.ramp:
-        gain, reach = random.uniform(0.1, 0.8), random.uniform(200, 800)
+        last, reach = random.uniform(45, 75), random.uniform(200, 800)
+        gain = last / reach * arguments.max_rate_scale
         drives = np.linspace(0.0, threshold + reach, steps)
         rates = gain * smoothed_ramp(drives - threshold, noise)
         top, half, reached = None, None, None
     else:
         top, half, reached = random.uniform(40, 200), random.uniform(50, 400), random.uniform(0.35, 0.95)
+        top *= arguments.max_rate_scale
         gain = top / half
         drives = np.linspace(0.0, threshold + half * reached / (1 - reached), steps)
         rates = top * smoothed_hyperbola((drives - threshold) / half, noise / half)
@@ -76,7 +83,7 @@ def draw_cell(seed, number, arguments):
 
 
 def gamma_trains(rates, shape, duration, random):
-    """Step index and time after onset of every spike of one cell."""
+    """Step index and time after onset, in ticks, of every spike of one cell."""
     expected = rates * duration
     draws = np.ceil(expected + 8 * np.sqrt(expected / shape) + 4).astype(np.int64)
     draws[rates <= 0] = 0
@@ -93,21 +100,55 @@ def gamma_trains(rates, shape, duration, random):
     before = np.repeat(total[first] - intervals[first], draws[draws > 0])
     times = total - before
     inside = times < duration
-    return step[inside], times[inside]
+    step, times = step[inside], times[inside]
+    # Rounded down, so that no spike is moved past the offset. One that shares its tick with the spike before moves to the
+    # next tick; the steps lie far enough apart on the common line of ticks for one not to reach into another.
+    length = int(2 * duration * TICKS_PER_S) + 1
+    order = np.arange(len(step))
+    line = np.maximum.accumulate(step * length + (times * TICKS_PER_S).astype(np.int64) - order) + order
+    ticks = line - step * length
+    inside = ticks < duration * TICKS_PER_S
+    return step[inside], ticks[inside]
+
+
+def step_range(text):
+    """Fewest and most steps from `40` or `20:80`."""
+    fewest, _, most = text.partition(":")
+    fewest, most = int(fewest), int(most or fewest)
+    if not 2 <= fewest <= most:
+        raise argparse.ArgumentTypeError(f"{text}: wanted a number of steps from 2 up, or FEWEST:MOST")
+    return fewest, most
+
+
+def positive(text):
+    """A finite number above zero."""
+    number = float(text)
+    if not 0 < number < np.inf:
+        raise argparse.ArgumentTypeError(f"{text}: wanted a finite number above zero")
+    return number
 
 
 def main():
     parser = argparse.ArgumentParser(description=__doc__.split("\n")[0])
     parser.add_argument("out", type=pathlib.Path, help="folder of the new recording set")
     parser.add_argument("--cells", type=int, default=1000)
-    parser.add_argument("--steps", type=int, help="steps a cell; default 20 to 80, drawn")
+    parser.add_argument(
+        "--steps", type=step_range, default=(20, 80), help="steps a cell, or FEWEST:MOST to draw them; default 20:80"
+    )
     parser.add_argument("--ramp", action="store_true", help="cells without a ceiling")
-    parser.add_argument("--step-s", type=float, default=1.0, help="length of a step, s")
-    parser.add_argument("--spikes-per-step", type=float, help="lengthen or shorten each cell's steps to this mean count")
+    parser.add_argument("--max-rate-scale", type=positive, default=1.0, help="multiplies all rates, for more or fewer spikes")
+    parser.add_argument("--truth", type=pathlib.Path, help="file of the true parameters; default OUT-truth.parquet beside OUT")
+    parser.add_argument("--step-s", type=positive, default=1.0, help="length of a step, s")
+    parser.add_argument("--spikes-per-step", type=positive, help="lengthen or shorten each cell's steps to this mean count")
     parser.add_argument("--extra-sd", type=float, default=0.0, help="scatter between steps beyond interval noise, Hz")
     parser.add_argument("--seed", type=int, default=1)
     arguments = parser.parse_args()
+    folder = arguments.out.resolve()
+    truth_file = arguments.truth or folder.with_name(folder.name + "-truth.parquet")
+    if folder in truth_file.resolve().parents:
+        parser.error(f"--truth {truth_file}: outside the set, where no reader takes it for a table of it")
     arguments.out.mkdir(parents=True, exist_ok=True)
+    truth_file.parent.mkdir(parents=True, exist_ok=True)
 
     digits = max(4, len(str(arguments.cells)))
     names = [f"cell-{number:0{digits}d}" for number in range(1, arguments.cells + 1)]
@@ -130,11 +171,11 @@ def main():
                 duration = arguments.step_s
                 if arguments.spikes_per_step:
                     duration = arguments.spikes_per_step / rates.mean()
-                step, after = gamma_trains(rates, shape, duration, random)
+                step, ticks = gamma_trains(rates, shape, duration, random)
                 truths.append({"cell": names[number], **truth, "step_s": duration})
                 cells.append(np.full(len(step), number))
                 sweeps.append(step.astype(np.int32) + 1)
-                times.append(ONSET_S + after)
+                times.append((round(ONSET_S * TICKS_PER_S) + ticks) / TICKS_PER_S)
                 protocol[0].append(np.full(len(drives), number))
                 protocol[1].append(np.arange(1, len(drives) + 1, dtype=np.int32))
                 protocol[2].append(np.full(len(drives), ONSET_S))
@@ -148,7 +189,7 @@ def main():
             protocol_file.write_table(
                 pa.table([dictionary.take(pa.array(protocol[0])), *protocol[1:]], schema=schema_protocol)
             )
-    pq.write_table(pa.Table.from_pylist(truths), arguments.out / "truth.parquet")
+    pq.write_table(pa.Table.from_pylist(truths), truth_file)
     print(f"{arguments.cells} cells, {sum(t['steps'] for t in truths)} steps, {spikes_written} spikes")
 
 
