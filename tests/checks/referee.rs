@@ -136,14 +136,12 @@ fn the_referee_finds_no_better_fit() {
         );
         println!("{line}");
         evaluations += found.evaluations;
-        evaluations += found.evaluations;
         if !(excess <= TOLERANCE) || !found.converged {
             worse.push(format!("{line}; converged {}", found.converged));
         } else if excess >= -TOLERANCE {
             matched += 1;
         }
     }
-    println!("{evaluations} passes of the curve");
     println!("{evaluations} passes of the curve");
     // A referee that lags behind would make the check empty.
     assert!(worse.is_empty(), "{} worse:\n{}", worse.len(), worse.join("\n"));
