@@ -22,8 +22,9 @@ use crate::summary::SummaryBuilder;
 use crate::summary::figure::{FigureNames, OVERVIEW_FILE, cell_figure};
 use crate::tables::{Counts, Provenance, ResultFolder, TableContext, Tables, WriteError, WrittenTable};
 
-/// Cells analysed, written and forgotten together: memory does not grow with the set's results.
-const CELLS_AT_ONCE: usize = 1024;
+/// Cells analysed together. The results of a batch are written and forgotten while the next is analysed: memory does
+/// not grow with the set's results.
+const CELLS_AT_ONCE: usize = 256;
 
 /// In a set of more cells than this, a cell without a single interval gets no figure.
 const CELLS_ALL_DRAWN: usize = 5000;
@@ -193,6 +194,16 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     // In a very large set a picture of nothing is not worth its file.
     let draw_all = cells.len() <= CELLS_ALL_DRAWN;
     let mut cells = cells.into_iter();
+    let mut keep = |analysed: Analysed| -> Result<(), RunError> {
+        let (results, drawn): (Vec<CellResult>, Vec<Option<String>>) = analysed.into_iter().unzip();
+        tables.write(&results)?;
+        counts.add(&results);
+        for (result, figure) in results.iter().zip(&drawn) {
+            summary.add(result, figure.as_deref());
+        }
+        Ok(())
+    };
+    let mut finished: Analysed = Vec::new();
     loop {
         let batch: Vec<CellRecording> = cells.by_ref().take(CELLS_AT_ONCE).collect();
         if batch.is_empty() {
@@ -205,41 +216,42 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
             .iter()
             .map(|cell| (draw && !cell.steps.is_empty()).then(|| names.name(&cell.id.0)))
             .collect();
-        let analysed: Vec<(CellResult, Option<String>)> = batch
-            .par_iter()
-            .zip(figure_names)
-            .map(
-                |(cell, figure)| -> Result<(CellResult, Option<String>), RunError> {
-                    if stopped() {
-                        return Err(RunError::Interrupted);
-                    }
-                    let result = analyse_cell(cell, &settings, job.rates_only);
-                    let shows = draw_all
-                        || result
-                            .responses
-                            .iter()
-                            .flat_map(|r| &r.rates)
-                            .any(|r| r.intervals > 0);
-                    let mut drawn = None;
-                    if let Some(name) = figure.filter(|_| shows)
-                        && let Some(svg) = cell_figure(&result)
-                    {
-                        write_text(&figures.join(&name), &svg)?;
-                        drawn = Some(name);
-                    }
-                    (job.progress)(Progress::Done(1));
-                    Ok((result, drawn))
-                },
-            )
-            .collect::<Result<_, _>>()?;
-        drop(batch);
-        let (results, drawn): (Vec<CellResult>, Vec<Option<String>>) = analysed.into_iter().unzip();
-        tables.write(&results)?;
-        counts.add(&results);
-        for (result, figure) in results.iter().zip(&drawn) {
-            summary.add(result, figure.as_deref());
-        }
+        let one = |(cell, figure): (CellRecording, Option<String>)| -> Result<_, RunError> {
+            if stopped() {
+                return Err(RunError::Interrupted);
+            }
+            let result = analyse_cell(&cell, &settings, job.rates_only);
+            let shows = draw_all
+                || result
+                    .responses
+                    .iter()
+                    .flat_map(|r| &r.rates)
+                    .any(|r| r.intervals > 0);
+            let mut drawn = None;
+            if let Some(name) = figure.filter(|_| shows)
+                && let Some(svg) = cell_figure(&result)
+            {
+                write_text(&figures.join(&name), &svg)?;
+                drawn = Some(name);
+            }
+            (job.progress)(Progress::Done(1));
+            Ok((result, drawn))
+        };
+        let before = std::mem::take(&mut finished);
+        let (analysed, kept) = rayon::join(
+            || {
+                batch
+                    .into_par_iter()
+                    .zip(figure_names)
+                    .map(one)
+                    .collect::<Result<Analysed, RunError>>()
+            },
+            || keep(before),
+        );
+        kept?;
+        finished = analysed?;
     }
+    keep(finished)?;
 
     (job.progress)(Progress::Finishing);
     let written = tables.finish()?;
@@ -268,6 +280,9 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
         fitted,
     })
 }
+
+/// What is known of each cell of a batch, with its figure's file.
+type Analysed = Vec<(CellResult, Option<String>)>;
 
 fn write_text(path: &Path, text: &str) -> Result<(), WriteError> {
     std::fs::write(path, text).map_err(|e| WriteError::of_io(path, "cannot be written", &e))

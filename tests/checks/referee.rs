@@ -87,13 +87,14 @@ fn assert_same_box(set: &DataSet, limits: &Value, lower: &[f64; 4], upper: &[f64
     let peak = set.points.iter().map(|p| p.rate).fold(0.0, f64::max);
     let (first, last) = (set.points[0].drive, set.points[set.points.len() - 1].drive);
     let span = last - first;
-    let gain = pair("gain").map(|g| (g * peak / span).ln());
+    let gain = pair("gain").map(|g| g * peak / span);
     let noise = pair("noise").map(|n| (n * span).ln());
     let [below, above] = pair("threshold");
     let wanted = [
-        (lower[0], gain[0]),
-        (upper[0], gain[1]),
-        // The program's own chart has 1/max rate; its zero, the ramp, is searched by the referee on its own.
+        // The program's own chart has the reciprocal of the gain.
+        (lower[0], 1.0 / gain[1]),
+        (upper[0], 1.0 / gain[0]),
+        // And 1/max rate; its zero, the ramp, is searched by the referee on its own.
         (lower[1], 0.0),
         (upper[1], 1.0 / (pair("ceiling")[0] * peak)),
         (lower[2], first - below * span),

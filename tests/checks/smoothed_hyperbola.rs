@@ -310,7 +310,7 @@ fn without_noise_it_is_the_hyperbola() {
 /// Rate and derivatives by (ln gain, 1/max rate, threshold, ln noise SD), as the fit evaluates them.
 fn by_the_fit(max_rate: f64, threshold: f64, half_rise: f64, noise_sd: f64, drive: f64) -> (f64, [f64; 4]) {
     let parameters = [
-        (max_rate / half_rise).ln(),
+        half_rise / max_rate,
         1.0 / max_rate,
         threshold,
         noise_sd.ln(),
@@ -355,7 +355,7 @@ fn without_a_ceiling_it_is_the_smoothed_ramp() {
         assert!((curve.dh_dz - limit.above).abs() < 80.0 / half_rise);
     }
     // At 1/max rate = 0 the fit takes the ramp itself, and its gradient continues that of the curve.
-    let parameters = [2.0_f64.ln(), 0.0, 100.0, 40.0_f64.ln()];
+    let parameters = [0.5, 0.0, 100.0, 40.0_f64.ln()];
     let mut at_limit = [0.0; 4];
     objective::evaluate(Chart::Ceiling, &parameters, &[130.0], |_, rate, d| {
         assert_close("limit", rate, 2.0 * limit.value, 1e-13);
@@ -464,14 +464,14 @@ fn gradients_in_physical_units() {
         ),
     ] {
         let [max_rate, threshold, half_rise, noise_sd] = p;
-        let (found, [by_ln_gain, by_ceiling, by_threshold, by_ln_noise]) =
+        let (found, [by_inverse_gain, by_ceiling, by_threshold, by_ln_noise]) =
             by_the_fit(max_rate, threshold, half_rise, noise_sd, drive);
         assert_close("rate", found, rate, FAST);
-        // From the fit's chart, gain = R/K and ceiling = 1/R, back to R and K.
-        let by_max_rate = by_ln_gain / max_rate - by_ceiling / (max_rate * max_rate);
+        // From the fit's chart, K/R and 1/R, back to R and K.
+        let by_max_rate = -(by_inverse_gain * half_rise + by_ceiling) / (max_rate * max_rate);
         assert_close("by max rate", by_max_rate, gradient[0], 1e-10);
         assert_close("by threshold", by_threshold, gradient[1], FAST);
-        assert_close("by half-rise", -by_ln_gain / half_rise, gradient[2], FAST);
+        assert_close("by half-rise", by_inverse_gain / max_rate, gradient[2], FAST);
         // A difference of bend and z dh/dz; the latter is up to 15 times as large here.
         assert_close("by noise SD", by_ln_noise / noise_sd, gradient[3], 20.0 * FAST);
         let full = evaluate((drive - threshold) / half_rise, noise_sd / half_rise);

@@ -6,7 +6,7 @@ use statrs::distribution::{ContinuousCDF, StudentsT};
 
 use super::main_fit::{MainFit, Scatter, refit_from};
 use super::objective::{Chart, Objective, Point};
-use super::profile::{Side, profile_side};
+use super::profile::{Side, SideSearch};
 use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions};
 
 /// One estimated quantity: value, standard error, 95 % interval. `None` is not estimated; a bound may be infinite.
@@ -94,8 +94,8 @@ fn unknown() -> Estimates {
 
 /// One pass over all profiles; `Err` carries a better point in the chart `Ceiling`.
 fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
-    let [ln_gain, ceiling, threshold, ln_noise] = fit.solution.parameters;
-    let gain = ln_gain.exp();
+    let [inverse_gain, ceiling, threshold, ln_noise] = fit.solution.parameters;
+    let gain = 1.0 / inverse_gain;
     let t = t_quantile(fit.degrees);
     let limit = t * t;
     let cost = fit.solution.cost();
@@ -122,7 +122,7 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
     let mut estimates = unknown();
     estimates.ceiling_open = ceiling_open;
     estimates.initial_gain.value = Some(gain);
-    estimates.initial_gain.se = se(0).map(|se| gain * se);
+    estimates.initial_gain.se = se(0).map(|se| gain * gain * se);
     estimates.threshold.value = Some(threshold);
     estimates.threshold.se = se(2);
     if !noise_free {
@@ -133,10 +133,10 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
         estimates.max_rate.value = Some(1.0 / ceiling);
         estimates.half_rise.value = Some(1.0 / (ceiling * gain));
         if let Some(c) = covariance {
-            // (ln R, ln K, threshold, ln noise) = (-ln c, -ln c - ln a, threshold, ln noise).
+            // (ln R, ln K, threshold, ln noise) = (-ln c, ln g - ln c, threshold, ln noise).
             let mut to = [[0.0; 4]; 4];
             to[0][1] = -1.0 / ceiling;
-            to[1][0] = -1.0;
+            to[1][0] = gain;
             to[1][1] = -1.0 / ceiling;
             to[2][2] = 1.0;
             to[3][3] = 1.0;
@@ -167,35 +167,27 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
         chart: Chart::Ceiling,
         rough: false,
     };
-    let mut evaluations = 0;
-    let mut side =
-        |problem: &Objective<'_>, best: &Solution<4>, options: &SolverOptions<4>, index, direction| {
-            match profile_side(problem, best, options, index, direction, limit, &mut evaluations) {
-                Side::Closed(value) => Ok(Some(value)),
-                Side::Open => Ok(Some(direction * f64::INFINITY)),
-                Side::Lost => Ok(None),
-                Side::Better(point) => Err(point),
-            }
-        };
+    let mut profiles = Profiles {
+        drives: &fit.levels.drives,
+        limit,
+        evaluations: 0,
+    };
     let (best, options) = (&fit.solution, &fit.options);
-    let down = side(&objective, best, options, 0, -1.0)?;
-    let up = side(&objective, best, options, 0, 1.0)?;
-    estimates.initial_gain.lo = down.map(f64::exp);
-    estimates.initial_gain.hi = up.map(f64::exp);
-    estimates.threshold.lo = side(&objective, best, options, 2, -1.0)?;
-    estimates.threshold.hi = side(&objective, best, options, 2, 1.0)?;
-    let down = side(&objective, best, options, 3, -1.0)?;
-    let up = side(&objective, best, options, 3, 1.0)?;
+    let mut side = |index, direction| profiles.side(&objective, best, options, index, direction);
+    estimates.initial_gain.lo = side(0, 1.0)?.map(|g| 1.0 / g);
+    // Open downwards: the curve may rise as a step.
+    estimates.initial_gain.hi = side(0, -1.0)?.map(|g| if g > 0.0 { 1.0 / g } else { f64::INFINITY });
+    estimates.threshold.lo = side(2, -1.0)?;
+    estimates.threshold.hi = side(2, 1.0)?;
     // Open downwards on the log scale: the data do not exclude a noise-free cell.
-    estimates.noise_sd.lo = down.map(f64::exp);
-    estimates.noise_sd.hi = up.map(f64::exp);
+    estimates.noise_sd.lo = side(3, -1.0)?.map(f64::exp);
+    estimates.noise_sd.hi = side(3, 1.0)?.map(f64::exp);
     // 1/max rate: its upper bound is the lower bound of max rate.
-    let up = side(&objective, best, options, 1, 1.0)?;
-    estimates.max_rate.lo = up.map(|c| 1.0 / c);
+    estimates.max_rate.lo = side(1, 1.0)?.map(|c| 1.0 / c);
     estimates.max_rate.hi = if ceiling_open {
         Some(f64::INFINITY)
     } else {
-        side(&objective, best, options, 1, -1.0)?.map(|c| if c > 0.0 { 1.0 / c } else { f64::INFINITY })
+        side(1, -1.0)?.map(|c| if c > 0.0 { 1.0 / c } else { f64::INFINITY })
     };
 
     let by_half_rise = Objective {
@@ -204,24 +196,83 @@ fn attempt(fit: &mut MainFit, profiles: bool) -> Result<Estimates, [f64; 4]> {
         rough: false,
     };
     let (best, options) = in_half_rise_chart(fit, &by_half_rise);
-    let back = |point: [f64; 4]| [point[0], point[1] / point[0].exp(), point[2], point[3]];
-    let up = side(&by_half_rise, &best, &options, 1, 1.0).map_err(back)?;
-    estimates.half_rise.lo = up.map(|k| 1.0 / k);
+    let back = |point: [f64; 4]| [point[0], point[1] * point[0], point[2], point[3]];
+    let mut side = |direction| {
+        profiles
+            .side(&by_half_rise, &best, &options, 1, direction)
+            .map_err(back)
+    };
+    estimates.half_rise.lo = side(1.0)?.map(|k| 1.0 / k);
     estimates.half_rise.hi = if ceiling_open {
         Some(f64::INFINITY)
     } else {
-        side(&by_half_rise, &best, &options, 1, -1.0)
-            .map_err(back)?
-            .map(|k| if k > 0.0 { 1.0 / k } else { f64::INFINITY })
+        side(-1.0)?.map(|k| if k > 0.0 { 1.0 / k } else { f64::INFINITY })
     };
+    let evaluations = profiles.evaluations;
     fit.evaluations += evaluations;
     Ok(estimates)
+}
+
+/// The profiles of one fit.
+struct Profiles<'a> {
+    drives: &'a [f64],
+    limit: f64,
+    evaluations: u64,
+}
+
+impl Profiles<'_> {
+    /// One end: its value, infinite where open, `None` where it could not be found; `Err` is a better minimum.
+    fn side(
+        &mut self,
+        objective: &Objective<'_>,
+        best: &Solution<4>,
+        options: &SolverOptions<4>,
+        index: usize,
+        direction: f64,
+    ) -> Result<Option<f64>, [f64; 4]> {
+        let search = SideSearch {
+            problem: objective,
+            best,
+            options,
+            index,
+            direction,
+            limit: self.limit,
+        };
+        let mut found = search.follow(&mut self.evaluations);
+        // A noise SD that no level feels has lost its slope: a wider one may reach further.
+        if let Side::Closed(end) = found
+            && index != 3
+        {
+            let felt = (FELT * gap_at(self.drives, end[2])).ln();
+            if end[3] < felt {
+                let mut wider = end;
+                wider[3] = felt;
+                found = search.follow_from(end, wider, &mut self.evaluations);
+            }
+        }
+        match found {
+            Side::Closed(end) => Ok(Some(end[index])),
+            Side::Open => Ok(Some(direction * f64::INFINITY)),
+            Side::Lost => Ok(None),
+            Side::Better(point) => Err(point),
+        }
+    }
+}
+
+/// Noise SD that the nearest level still feels, as a fraction of the gap between levels.
+const FELT: f64 = 0.5;
+
+/// Gap between the two levels on either side of `threshold`, or the outermost gap.
+fn gap_at(drives: &[f64], threshold: f64) -> f64 {
+    let above = drives.partition_point(|d| *d < threshold);
+    let high = above.clamp(1, drives.len() - 1);
+    drives[high] - drives[high - 1]
 }
 
 /// The same minimum seen in the chart of the half-rise.
 fn in_half_rise_chart(fit: &MainFit, objective: &Objective<'_>) -> (Solution<4>, SolverOptions<4>) {
     let mut best = fit.solution;
-    best.parameters[1] *= best.parameters[0].exp();
+    best.parameters[1] /= best.parameters[0];
     best.sums = NormalSums::default();
     objective.accumulate(&best.parameters, &mut best.sums);
     best.sums.curvature = best.sums.symmetric();

@@ -3,7 +3,7 @@
 use super::estimates::t_quantile;
 use super::main_fit::covariance;
 use super::objective::Point;
-use super::profile::{Side, profile_side};
+use super::profile::{Side, SideSearch};
 use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions, minimise};
 use crate::curve::hyperbola::hyperbola;
 
@@ -118,18 +118,16 @@ impl HyperbolaFit {
             let end = if beyond {
                 direction * f64::INFINITY
             } else {
-                let mut evaluations = 0;
-                let solution = &self.solution;
-                match profile_side(
-                    &problem,
-                    solution,
-                    &options,
+                let search = SideSearch {
+                    problem: &problem,
+                    best: &self.solution,
+                    options: &options,
                     index,
                     direction,
                     limit,
-                    &mut evaluations,
-                ) {
-                    Side::Closed(value) => value,
+                };
+                match search.follow(&mut 0) {
+                    Side::Closed(end) => end[index],
                     Side::Open => direction * f64::INFINITY,
                     Side::Better(_) | Side::Lost => return None,
                 }

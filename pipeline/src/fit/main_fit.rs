@@ -195,12 +195,12 @@ fn far_apart(a: &Solution<4>, b: &Solution<4>) -> bool {
 fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
     let (lowest, highest) = (levels.drives[0], levels.drives[levels.drives.len() - 1]);
     let range = highest - lowest;
-    let gain = GAIN_BOUNDS.map(|g| (g * peak / range).ln());
+    let [flattest, steepest] = GAIN_BOUNDS.map(|g| range / (g * peak));
     let noise = NOISE_BOUNDS.map(|n| (n * range).ln());
     SolverOptions {
-        lower: [gain[0], 0.0, lowest - THRESHOLD_BELOW * range, noise[0]],
+        lower: [steepest, 0.0, lowest - THRESHOLD_BELOW * range, noise[0]],
         upper: [
-            gain[1],
+            flattest,
             CEILING_BOUND / peak,
             highest + THRESHOLD_ABOVE * range,
             noise[1],
@@ -208,7 +208,7 @@ fn bounds(levels: &Levels, peak: f64) -> SolverOptions<4> {
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
         max_iterations: 400,
-        stride: [1.0, 0.5 / peak, 0.25 * range, 1.0],
+        stride: [0.5 * range / peak, 0.5 / peak, 0.25 * range, 1.0],
         ..SolverOptions::default()
     }
 }

@@ -13,4 +13,4 @@ pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
 pub use objective::Point;
-pub use profile::{Side, profile_side};
+pub use profile::{Side, SideSearch};

@@ -1,12 +1,13 @@
 //! The weighted sum of squares that the fit minimises, and the two charts in which it is searched.
 //!
 //! In terms of max rate R and half-rise K the curve is badly conditioned for cells that hardly bend: R and K grow
-//! together. With the initial gain a = R/K and c = 1/R it is well behaved, and the smoothed ramp is the ordinary
-//! boundary point c = 0:
+//! together. With g = K/R, the reciprocal of the initial gain, and c = 1/R it is well behaved: without noise
+//! 1/f = c + g/(drive - threshold), a straight line. The smoothed ramp is the ordinary boundary point c = 0, and a
+//! curve that rises as fast as its noise lets it lies at the other boundary, g = 0:
 //!
 //! ```text
-//! chart Ceiling:  (ln a, c, threshold, ln noise_sd)      df/dc       = -R^2 excess,  df/dln a = R bend
-//! chart HalfRise: (ln a, 1/K, threshold, ln noise_sd)    df/d(1/K)   = (df/dc)/a,    df/dln a = f
+//! chart Ceiling:  (g, c, threshold, ln noise_sd)      df/dc     = -R^2 excess,  df/dg = -R bend/g
+//! chart HalfRise: (g, 1/K, threshold, ln noise_sd)    df/d(1/K) = g df/dc,      df/dg = -f/g
 //! ```
 //!
 //! with `bend` and `excess` of [`crate::curve::smoothed_hyperbola`]. The second chart serves the profile of the
@@ -98,9 +99,9 @@ impl Levels {
 /// Which four numbers the search moves.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Chart {
-    /// (ln initial gain, 1/max rate, threshold, ln noise SD).
+    /// (1/initial gain, 1/max rate, threshold, ln noise SD).
     Ceiling,
-    /// (ln initial gain, 1/half-rise, threshold, ln noise SD).
+    /// (1/initial gain, 1/half-rise, threshold, ln noise SD).
     HalfRise,
 }
 
@@ -167,11 +168,11 @@ impl<E: Each> Pass for EachDrive<'_, E> {
 
     #[inline(always)]
     fn run(mut self) {
-        let [ln_gain, second, threshold, ln_noise] = *self.parameters;
-        let (gain, noise) = (ln_gain.exp(), ln_noise.exp());
+        let [inverse_gain, second, threshold, ln_noise] = *self.parameters;
+        let (gain, noise) = (1.0 / inverse_gain, ln_noise.exp());
         let (ceiling, by_second) = match self.chart {
             Chart::Ceiling => (second, 1.0),
-            Chart::HalfRise => (second / gain, 1.0 / gain),
+            Chart::HalfRise => (second * inverse_gain, inverse_gain),
         };
         let half_rise_chart = self.chart == Chart::HalfRise;
         if ceiling > 0.0 {
@@ -186,12 +187,12 @@ impl<E: Each> Pass for EachDrive<'_, E> {
             for (i, drive) in self.drives.iter().enumerate() {
                 let f = kernel.at((drive - threshold) * per_half_rise);
                 let rate = max_rate * f.h;
-                let by_gain = if half_rise_chart { rate } else { max_rate * f.bend };
+                let by_inverse_gain = -gain * if half_rise_chart { rate } else { max_rate * f.bend };
                 let by_ceiling = -max_rate * max_rate * f.excess * by_second;
                 self.each.each(
                     i,
                     rate,
-                    &[by_gain, by_ceiling, -gain * f.dh_dz, max_rate * f.dh_dlns],
+                    &[by_inverse_gain, by_ceiling, -gain * f.dh_dz, max_rate * f.dh_dlns],
                 );
             }
         } else {
@@ -199,8 +200,11 @@ impl<E: Each> Pass for EachDrive<'_, E> {
                 let r = ramp(drive - threshold, noise);
                 let by_ceiling = -gain * gain * r.square * by_second;
                 let rate = gain * r.value;
-                self.each
-                    .each(i, rate, &[rate, by_ceiling, -gain * r.above, gain * r.spread]);
+                self.each.each(
+                    i,
+                    rate,
+                    &[-gain * rate, by_ceiling, -gain * r.above, gain * r.spread],
+                );
             }
         }
     }
@@ -240,7 +244,7 @@ mod tests {
         let drives = [20.0, 90.0, 130.0, 260.0, 800.0];
         for chart in [Chart::Ceiling, Chart::HalfRise] {
             for second in [0.0, 1e-9, 0.01, 0.03] {
-                let p = [(0.4_f64).ln(), second, 110.0, (25.0_f64).ln()];
+                let p = [2.5, second, 110.0, (25.0_f64).ln()];
                 let mut at = [[0.0; 4]; 5];
                 evaluate(chart, &p, &drives, |i, _, d| at[i] = *d);
                 for k in 0..4 {
@@ -278,7 +282,7 @@ mod tests {
                 se: 0.5 + f64::from(i % 4),
             })
             .collect();
-        let p = [(0.3_f64).ln(), 0.02, 70.0, (30.0_f64).ln()];
+        let p = [1.0 / 0.3, 0.02, 70.0, (30.0_f64).ln()];
         let levels = Levels::new(&points, 2.0);
         let mut sums = NormalSums::default();
         Objective {

@@ -93,6 +93,16 @@ pub struct SolverOptions<const P: usize> {
     pub stride: [f64; P],
     /// First damping, as a fraction of the largest curvature.
     pub initial_damping: f64,
+    /// Curvature added to every step, in absolute terms. It moves no minimum; it keeps a parameter that the points
+    /// hardly feel from leaping, and ends the search once moving that parameter gains too little to follow it.
+    pub ridge: [f64; P],
+}
+
+impl<const P: usize> SolverOptions<P> {
+    /// The ridge that charges `cost` for a move of one stride; none where the stride has no limit.
+    pub fn ridge_of(&self, cost: f64) -> [f64; P] {
+        std::array::from_fn(|i| cost / (self.stride[i] * self.stride[i]))
+    }
 }
 
 impl<const P: usize> Default for SolverOptions<P> {
@@ -106,6 +116,7 @@ impl<const P: usize> Default for SolverOptions<P> {
             max_iterations: 2000,
             stride: [f64::INFINITY; P],
             initial_damping: 1e-3,
+            ridge: [0.0; P],
         }
     }
 }
@@ -199,7 +210,7 @@ impl<const P: usize> LevenbergMarquardt<P> {
                     a[i][j] = self.sums.curvature[i][j] / (d[i] * d[j]);
                 }
             }
-            a[i][i] += damping;
+            a[i][i] += damping + self.options.ridge[i] / (d[i] * d[i]);
         }
         let mut step = cholesky_solve(&a, &b)?;
         for i in 0..P {

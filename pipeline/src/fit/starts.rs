@@ -52,13 +52,13 @@ pub fn starts(levels: &Levels) -> Vec<[f64; 4]> {
                 }
                 let scale = cross / square;
                 let cost = total - scale * cross;
-                let (gain, ceiling) = if half_rise.is_finite() {
-                    (scale / half_rise, 1.0 / scale)
+                let (inverse_gain, ceiling) = if half_rise.is_finite() {
+                    (half_rise / scale, 1.0 / scale)
                 } else {
-                    (scale, 0.0)
+                    (1.0 / scale, 0.0)
                 };
                 if best.is_none_or(|(least, _)| cost < least) {
-                    best = Some((cost, [gain.ln(), ceiling, threshold, noise.ln()]));
+                    best = Some((cost, [inverse_gain, ceiling, threshold, noise.ln()]));
                 }
             }
             ranked.extend(best);
