@@ -309,12 +309,7 @@ fn without_noise_it_is_the_hyperbola() {
 
 /// Rate and derivatives by (ln gain, 1/max rate, threshold, ln noise SD), as the fit evaluates them.
 fn by_the_fit(max_rate: f64, threshold: f64, half_rise: f64, noise_sd: f64, drive: f64) -> (f64, [f64; 4]) {
-    let parameters = [
-        half_rise / max_rate,
-        1.0 / max_rate,
-        threshold,
-        noise_sd.ln(),
-    ];
+    let parameters = [half_rise / max_rate, 1.0 / max_rate, threshold, noise_sd.ln()];
     let mut found = (f64::NAN, [f64::NAN; 4]);
     objective::evaluate(Chart::Ceiling, &parameters, &[drive], |_, rate, d| {
         found = (rate, *d)

@@ -199,10 +199,11 @@ fn noise_free(z: f64) -> Smoothed {
 #[derive(Debug)]
 struct FastRules {
     rough_below: Rule<16>,
-    rough_above: Rule<24>,
-    below: Rule<40>,
-    above: Rule<48>,
-    broad: Rule<80>,
+    legendre_24: Rule<24>,
+    legendre_32: Rule<32>,
+    legendre_40: Rule<40>,
+    legendre_48: Rule<48>,
+    legendre_80: Rule<80>,
     hermite_8: Rule<8>,
     hermite_16: Rule<16>,
     hermite_24: Rule<24>,
@@ -210,10 +211,11 @@ struct FastRules {
 
 static FAST: LazyLock<FastRules> = LazyLock::new(|| FastRules {
     rough_below: legendre(),
-    rough_above: legendre(),
-    below: legendre(),
-    above: legendre(),
-    broad: legendre(),
+    legendre_24: legendre(),
+    legendre_32: legendre(),
+    legendre_40: legendre(),
+    legendre_48: legendre(),
+    legendre_80: legendre(),
     hermite_8: hermite(),
     hermite_16: hermite(),
     hermite_24: hermite(),
@@ -233,12 +235,55 @@ pub struct Kernel {
     half_precision: f64,
     p0_scale: f64,
     rough: bool,
+    below: Nodes,
+    above: [Nodes; 3],
+}
+
+/// How many nodes a panel needs.
+#[derive(Clone, Copy, Debug)]
+enum Nodes {
+    Rough16,
+    Of24,
+    Of32,
+    Of40,
+    Of48,
+    Of80,
+}
+
+/// The least number of nodes that keeps 1e-11, found by trying them all against [`evaluate`]: below the threshold,
+/// and above it for z/s up to 2, up to 4 and beyond. The wider the noise, the more the pole at u = -1 costs.
+fn nodes(s: f64) -> (Nodes, [Nodes; 3]) {
+    use Nodes::{Of24, Of32, Of40, Of48, Of80};
+    let below = if s <= 1.5 {
+        Of24
+    } else if s <= 20.0 {
+        Of32
+    } else {
+        Of80
+    };
+    let above = if s <= 0.05 {
+        [Of24, Of24, Of32]
+    } else if s <= 0.4 {
+        [Of24, Of32, Of40]
+    } else if s <= 1.0 {
+        [Of32, Of32, Of48]
+    } else if s <= 2.0 {
+        [Of32, Of40, Of48]
+    } else if s <= 5.0 {
+        [Of32, Of40, Of80]
+    } else {
+        [Of80; 3]
+    };
+    (below, above)
 }
 
 impl Kernel {
     /// Prepares the curve for `s` = noise_sd/half_rise, positive.
     pub fn new(s: f64) -> Self {
+        let (below, above) = nodes(s);
         Self {
+            below,
+            above,
             rules: &FAST,
             s,
             half_precision: 0.5 / (s * s),
@@ -251,6 +296,8 @@ impl Kernel {
     pub fn rough(s: f64) -> Self {
         Self {
             rough: true,
+            below: Nodes::Rough16,
+            above: [Nodes::Of24; 3],
             ..Self::new(s)
         }
     }
@@ -276,22 +323,27 @@ impl Kernel {
             };
             (1.0, sums)
         } else {
-            let sums = if z <= 0.0 {
+            let (rules, top) = if z <= 0.0 {
                 let reach = if self.rough { 24.0 } else { 66.0 } * s * s;
-                let top = reach / (-z + (z * z + reach).sqrt());
-                if self.rough {
-                    self.near(&self.rules.rough_below, z, top)
-                } else if s <= 20.0 {
-                    self.near(&self.rules.below, z, top)
-                } else {
-                    self.near(&self.rules.broad, z, top)
-                }
-            } else if self.rough {
-                self.near(&self.rules.rough_above, z, z + 4.5 * s)
-            } else if s <= 0.5 {
-                self.near(&self.rules.above, z, z + 7.6 * s)
+                (self.below, reach / (-z + (z * z + reach).sqrt()))
             } else {
-                self.near(&self.rules.broad, z, z + 7.6 * s)
+                let above = if w <= 2.0 {
+                    self.above[0]
+                } else if w <= 4.0 {
+                    self.above[1]
+                } else {
+                    self.above[2]
+                };
+                (above, z + if self.rough { 4.5 } else { 7.6 } * s)
+            };
+            let r = self.rules;
+            let sums = match rules {
+                Nodes::Rough16 => self.near(&r.rough_below, z, top),
+                Nodes::Of24 => self.near(&r.legendre_24, z, top),
+                Nodes::Of32 => self.near(&r.legendre_32, z, top),
+                Nodes::Of40 => self.near(&r.legendre_40, z, top),
+                Nodes::Of48 => self.near(&r.legendre_48, z, top),
+                Nodes::Of80 => self.near(&r.legendre_80, z, top),
             };
             (self.p0_scale * vector_exp::exp(-0.5 * w * w), sums)
         };
