@@ -5,6 +5,19 @@ use serde::{Deserialize, Serialize};
 
 use crate::rates::Response;
 
+/// Which cells get a figure of their own. Contact sheets and the other figures of the set show all cells.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum CellFigures {
+    /// Every cell with steps.
+    #[default]
+    All,
+    /// Cells with a flag of severity caution or reject, or with a response without a usable fit.
+    Flagged,
+    /// No figure at all, not even of the set.
+    None,
+}
+
 /// The analysis settings of one run.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 #[serde(default, deny_unknown_fields)]
@@ -17,8 +30,10 @@ pub struct Analysis {
     pub lvr_refractory_s: f64,
     /// Whether profile intervals are computed; without them intervals are null and `open` rests on the ramp fit.
     pub profiles: bool,
-    /// Whether figures are drawn.
-    pub figures: bool,
+    /// Which cells get a figure of their own; with `none` no figure is drawn at all.
+    pub figures: CellFigures,
+    /// Whether the figure of a cell also shows the other rate functions fitted to it.
+    pub draw_rivals: bool,
     /// Steps with a rate from intervals below which a response is `silent`.
     pub min_interval_steps: usize,
     /// Upper over lower bound of max rate above which a closed ceiling is `loose`.
@@ -55,7 +70,8 @@ impl Default for Analysis {
             steady_fraction: 0.5,
             lvr_refractory_s: 0.005,
             profiles: true,
-            figures: true,
+            figures: CellFigures::All,
+            draw_rivals: false,
             min_interval_steps: 3,
             loose_ratio: 1.5,
             declining_fraction: 0.85,

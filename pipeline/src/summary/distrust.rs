@@ -1,5 +1,6 @@
 //! The cells to look at before anything else, worst first.
 
+use super::figure::{WORST, WorstCell};
 use super::text::{id_markdown, sentence_markdown};
 use crate::assess::{Ceiling, CellResult, Flag, Severity, Status};
 
@@ -19,10 +20,17 @@ struct Listed {
     figure: Option<String>,
 }
 
+struct Drawn {
+    rank: Rank,
+    cell: WorstCell,
+}
+
 /// Keeps the worst cells of a stream.
 #[derive(Default)]
 pub(super) struct Distrust {
     listed: Vec<Listed>,
+    /// The worst of those that have something to draw.
+    drawn: Vec<Drawn>,
     /// Cells with a reason to be listed, shown or not.
     suspects: u64,
 }
@@ -62,8 +70,8 @@ fn tier(cell: &CellResult, rejects: usize, cautions: usize) -> Option<u8> {
 }
 
 impl Distrust {
-    /// Looks at the next cell; `place` is its number in the stream.
-    pub(super) fn add(&mut self, cell: &CellResult, figure: Option<&str>, place: u64) {
+    /// Looks at the next cell; `place` is its number in the stream, `draw` whether its figure may be wanted.
+    pub(super) fn add(&mut self, cell: &CellResult, figure: Option<&str>, place: u64, draw: bool) {
         let flags = |severity| {
             cell.responses
                 .iter()
@@ -82,6 +90,14 @@ impl Distrust {
             std::cmp::Reverse(cautions),
             place,
         );
+        let at = self.drawn.partition_point(|drawn| drawn.rank < rank);
+        if draw
+            && at < WORST
+            && let Some(cell) = WorstCell::new(cell)
+        {
+            self.drawn.truncate(WORST - 1);
+            self.drawn.insert(at, Drawn { rank, cell });
+        }
         let at = self.listed.partition_point(|listed| listed.rank < rank);
         if at >= LISTED {
             return;
@@ -104,10 +120,19 @@ impl Distrust {
         self.suspects
     }
 
-    /// Cell, group, reasons, figure file; worst first.
-    pub(super) fn rows(&self) -> impl Iterator<Item = (&str, &str, &str, Option<&str>)> {
+    /// The worst cells that have something to draw, worst first.
+    pub(super) fn drawn(&self) -> Vec<&WorstCell> {
+        self.drawn.iter().map(|drawn| &drawn.cell).collect()
+    }
+
+    /// Number in the figure of the worst, cell, group, reasons, figure file; worst first.
+    pub(super) fn rows(&self) -> impl Iterator<Item = (Option<usize>, &str, &str, &str, Option<&str>)> {
         self.listed.iter().map(|l| {
             (
+                self.drawn
+                    .iter()
+                    .position(|drawn| drawn.rank == l.rank)
+                    .map(|i| i + 1),
                 l.cell.as_str(),
                 l.group.as_str(),
                 l.reasons.as_str(),

@@ -218,20 +218,77 @@ impl Canvas {
         );
     }
 
+    /// Open circles in one element, so that hundreds of them stay light.
+    pub(super) fn circles(&mut self, centres: &[(f64, f64)], radius: f64, stroke: Stroke) {
+        if centres.is_empty() {
+            return;
+        }
+        let (r, across) = (number(radius), number(2.0 * radius));
+        let mut data = String::with_capacity(centres.len() * 48);
+        for (x, y) in centres {
+            data.push_str(&format!(
+                "M{} {}a{r} {r} 0 1 0 {across} 0a{r} {r} 0 1 0 -{across} 0",
+                number(x - radius),
+                number(*y)
+            ));
+        }
+        self.append(
+            Path::new()
+                .set("d", data)
+                .set("fill", "none")
+                .set("stroke", stroke.colour)
+                .set("stroke-width", number(stroke.width)),
+        );
+    }
+
+    /// A filled circle.
+    pub(super) fn disc(&mut self, centre: (f64, f64), radius: f64, colour: &'static str) {
+        self.append(
+            Circle::new()
+                .set("cx", number(centre.0))
+                .set("cy", number(centre.1))
+                .set("r", number(radius))
+                .set("fill", colour),
+        );
+    }
+
+    /// An open diamond.
+    pub(super) fn diamond(&mut self, (x, y): (f64, f64), radius: f64, stroke: Stroke) {
+        let corners = [
+            (x, y - radius),
+            (x + radius, y),
+            (x, y + radius),
+            (x - radius, y),
+            (x, y - radius),
+            (x + radius, y),
+        ];
+        self.path(&corners, stroke);
+    }
+
     /// A diagonal cross.
     pub(super) fn cross(&mut self, centre: (f64, f64), radius: f64, stroke: Stroke) {
-        let (x, y) = centre;
-        let data = format!(
-            "M{} {}L{} {}M{} {}L{} {}",
-            number(x - radius),
-            number(y - radius),
-            number(x + radius),
-            number(y + radius),
-            number(x - radius),
-            number(y + radius),
-            number(x + radius),
-            number(y - radius)
-        );
+        self.crosses(&[centre], radius, stroke);
+    }
+
+    /// Diagonal crosses in one element.
+    pub(super) fn crosses(&mut self, centres: &[(f64, f64)], radius: f64, stroke: Stroke) {
+        if centres.is_empty() {
+            return;
+        }
+        let mut data = String::with_capacity(centres.len() * 48);
+        for (x, y) in centres {
+            data.push_str(&format!(
+                "M{} {}L{} {}M{} {}L{} {}",
+                number(x - radius),
+                number(y - radius),
+                number(x + radius),
+                number(y + radius),
+                number(x - radius),
+                number(y + radius),
+                number(x + radius),
+                number(y - radius)
+            ));
+        }
         self.append(
             Path::new()
                 .set("d", data)

@@ -1,6 +1,6 @@
 //! The figure of a set: one small panel a cell.
 
-use super::canvas::{Anchor, Canvas, Font, PALE, fit_text, font};
+use super::canvas::{Anchor, Canvas, Font, PALE, fit_text, font, wrap_text};
 use super::legend::{Mark, draw_legend, legend_height};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel};
 use crate::assess::{Ceiling, CellResult};
@@ -14,16 +14,17 @@ const COLUMNS: usize = 6;
 const LEFT: f64 = 32.0;
 const WIDTH: f64 = 128.0;
 const RIGHT: f64 = 18.0;
-const HEAD: f64 = 30.0;
+/// Room for the name and a verdict of up to two lines.
+const HEAD: f64 = 41.0;
 const HEIGHT: f64 = 88.0;
-const FOOT: f64 = 20.0;
+const FOOT: f64 = 22.0;
 const EDGE: f64 = 10.0;
 /// Room left of the first column for the name of the rate axis.
 const AXIS: f64 = 16.0;
 const TITLE: f64 = 54.0;
 
 const STYLE: PanelStyle = PanelStyle {
-    label: 8.0,
+    label: 9.0,
     radius: 1.7,
     line: 1.5,
     x_ticks: 3,
@@ -31,6 +32,7 @@ const STYLE: PanelStyle = PanelStyle {
     headroom: 3.0,
     strip: 9.0,
     large: false,
+    drive_labels: true,
 };
 
 struct Digest {
@@ -94,6 +96,9 @@ impl Overview {
         let mut marks = vec![Mark::Used];
         if self.drawn.iter().any(|d| d.panel.has_unused()) {
             marks.push(Mark::Unused);
+        }
+        if self.drawn.iter().any(|d| d.panel.has_downweighted()) {
+            marks.push(Mark::Downweighted);
         }
         for verdict in [
             Ceiling::Resolved,
@@ -161,14 +166,16 @@ impl Overview {
             canvas.text((frame.left, top + 14.0), &fit_text(&digest.id, &name, room), name);
             let small = Font {
                 colour: PALE,
-                ..font(8.5)
+                ..font(9.0)
             };
             let verdict = if mixed {
                 format!("{}, {}", digest.panel.verdict(), digest.panel.unit)
             } else {
-                digest.panel.verdict().into()
+                digest.panel.verdict()
             };
-            canvas.text((frame.left, top + 25.0), &fit_text(&verdict, &small, room), small);
+            for (line, text) in wrap_text(&verdict, &small, room, 2).iter().enumerate() {
+                canvas.text((frame.left, top + 25.0 + 10.5 * line as f64), text, small);
+            }
             draw_panel(&mut canvas, &digest.panel, frame, &STYLE);
         }
         let axis = Font {
