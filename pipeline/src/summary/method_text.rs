@@ -92,5 +92,6 @@ pub(super) const REFERENCES: &str = "\
 - Paule RC, Mandel J (1982). Consensus values and weighting factors. *Journal of Research of the National Bureau of Standards* 87, 377-385.
 - Shinomoto S, Shima K, Tanji J (2003). Differences in spiking patterns among cortical neurons. *Neural Computation* 15, 2823-2842.
 - Shinomoto S, Kim H, Shimokawa T, et al. (2009). Relating neuronal firing patterns to functional differentiation of cerebral cortex. *PLoS Computational Biology* 5, e1000433.
+- Tukey JW (1977). *Exploratory Data Analysis*. Addison-Wesley, Reading. Chapter 2. The far-out values of the distributions.
 - Venzon DJ, Moolgavkar SH (1988). A method for computing profile-likelihood-based confidence intervals. *Applied Statistics* 37, 87-94.
 ";

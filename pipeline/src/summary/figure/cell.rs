@@ -3,7 +3,7 @@
 use super::canvas::{Anchor, CURVE, Canvas, Font, PALE, fit_text, font, solid, text_width, wrap_text};
 use super::legend::{Mark, draw_legend, legend_height};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel, rival_stroke, weight_of};
-use super::residual::draw_residuals;
+use super::residual::{draw_residuals, has_off_scale};
 use crate::assess::{CellResult, ResponseResult, Status};
 use crate::curve::SMOOTHED_HYPERBOLA;
 use crate::summary::numbers::{count_text, estimate_text};
@@ -34,6 +34,7 @@ const STYLE: PanelStyle = PanelStyle {
     strip: 18.0,
     large: true,
     drive_labels: true,
+    verdict_dashes: false,
 };
 
 const RESIDUAL_STYLE: PanelStyle = PanelStyle {
@@ -87,6 +88,9 @@ pub fn cell_figure(cell: &CellResult, draw_rivals: bool) -> Option<String> {
     }
     let below = if panels.iter().any(Panel::has_residuals) {
         marks.push(Mark::Residual);
+        if panels.iter().any(has_off_scale) {
+            marks.push(Mark::OffScale);
+        }
         RESIDUAL_GAP + RESIDUAL
     } else {
         0.0

@@ -1,7 +1,7 @@
 //! What the marks mean, in a row that wraps.
 
 use super::canvas::{BAND, CURVE, Canvas, INK, PALE, POINT, Stroke, font, solid, text_width};
-use super::panel::{BEYOND, verdict_dashes};
+use super::panel::{BEYOND, triangle, verdict_dashes};
 use crate::assess::Ceiling;
 
 /// One entry.
@@ -15,6 +15,8 @@ pub(super) enum Mark {
     Downweighted,
     /// What the fit leaves of a step.
     Residual,
+    /// A residual that the panel is too low for.
+    OffScale,
     /// The fitted curve with its band.
     Curve,
     /// The curve beyond the steps used.
@@ -36,6 +38,7 @@ impl Mark {
             Self::Unused => "step not used by the fit",
             Self::Downweighted => "step with less than half its weight",
             Self::Residual => "residual ± 1 SD as the fit weighs it",
+            Self::OffScale => "residual beyond the axis",
             Self::Curve => "fitted rate function, 95 % band",
             Self::Beyond => "the same beyond the steps used",
             Self::Band => "95 % band",
@@ -92,6 +95,7 @@ pub(super) fn draw_legend(canvas: &mut Canvas, marks: &[Mark], at: (f64, f64), w
             }
             Mark::Unused => canvas.cross((middle, y), 2.6, solid(POINT, 0.9)),
             Mark::Downweighted => canvas.diamond((middle, y), 4.0, solid(POINT, 1.1)),
+            Mark::OffScale => triangle(canvas, (middle, y + 3.0), (0.0, 1.0), 5.5),
             Mark::Beyond => canvas.line((x, y), (end, y), BEYOND),
             Mark::Curve => {
                 canvas.area(

@@ -79,8 +79,8 @@ impl Glance {
             Self::Loose => Some(("#56B4E9", 0.14)),
             Self::Open => Some(("#E69F00", 0.22)),
             Self::Declining => Some(("#CC79A7", 0.34)),
-            Self::Rejected => Some(("#000000", 0.16)),
-            Self::NoFit => Some(("#000000", 0.26)),
+            Self::Rejected => Some(("#000000", 0.10)),
+            Self::NoFit => Some(("#000000", 0.20)),
         }
     }
 

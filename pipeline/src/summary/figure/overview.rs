@@ -14,8 +14,9 @@ const COLUMNS: usize = 6;
 const LEFT: f64 = 32.0;
 const WIDTH: f64 = 128.0;
 const RIGHT: f64 = 18.0;
-/// Room for the name and a verdict of up to two lines.
-const HEAD: f64 = 41.0;
+/// Room for the name and a verdict of one line, and of two.
+const HEAD: f64 = 30.0;
+const TALL_HEAD: f64 = 41.0;
 const HEIGHT: f64 = 88.0;
 const FOOT: f64 = 22.0;
 const EDGE: f64 = 10.0;
@@ -33,6 +34,7 @@ const STYLE: PanelStyle = PanelStyle {
     strip: 9.0,
     large: false,
     drive_labels: true,
+    verdict_dashes: true,
 };
 
 struct Digest {
@@ -90,7 +92,17 @@ impl Overview {
         let columns = self.drawn.len().clamp(3, COLUMNS);
         let rows = self.drawn.len().div_ceil(columns);
         let cell_width = LEFT + WIDTH + RIGHT;
-        let cell_height = HEAD + HEIGHT + FOOT;
+        let small = Font {
+            colour: PALE,
+            ..font(9.0)
+        };
+        let room = WIDTH + 0.5 * RIGHT;
+        let tall = self
+            .drawn
+            .iter()
+            .any(|d| wrap_text(&d.panel.verdict(), &small, room, 2).len() > 1);
+        let head = if tall { TALL_HEAD } else { HEAD };
+        let cell_height = head + HEIGHT + FOOT;
         let width = 2.0 * EDGE + AXIS + cell_width * columns as f64;
         let inner = width - 2.0 * EDGE - AXIS;
         let mut marks = vec![Mark::Used];
@@ -154,20 +166,15 @@ impl Overview {
             let top = TITLE + cell_height * (i / columns) as f64;
             let frame = Frame {
                 left: start + LEFT,
-                top: top + HEAD,
+                top: top + head,
                 width: WIDTH,
                 height: HEIGHT,
             };
-            let room = WIDTH + 0.5 * RIGHT;
             let name = Font {
                 bold: true,
                 ..font(9.0)
             };
             canvas.text((frame.left, top + 14.0), &fit_text(&digest.id, &name, room), name);
-            let small = Font {
-                colour: PALE,
-                ..font(9.0)
-            };
             let verdict = if mixed {
                 format!("{}, {}", digest.panel.verdict(), digest.panel.unit)
             } else {

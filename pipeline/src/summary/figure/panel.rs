@@ -316,8 +316,10 @@ pub(super) struct PanelStyle {
     pub headroom: f64,
     /// Room below 0 Hz, for the threshold.
     pub strip: f64,
-    /// Whether notes are written and the curve is drawn solid whatever the verdict, beyond the steps used as well.
+    /// Whether notes are written and the curve is drawn beyond the steps used as well.
     pub large: bool,
+    /// Whether the dashes of the curve tell the verdict.
+    pub verdict_dashes: bool,
     /// Whether the drive axis carries its numbers.
     pub drive_labels: bool,
 }
@@ -434,7 +436,11 @@ pub(super) fn draw_panel(canvas: &mut Canvas, panel: &Panel, frame: Frame, style
         .iter()
         .map(|p| (x.clamped(p.drive), y.clamped(p.rate_hz)))
         .collect();
-    let dashes = if style.large { None } else { panel.dashes() };
+    let dashes = if style.verdict_dashes {
+        panel.dashes()
+    } else {
+        None
+    };
     canvas.path(
         &curve,
         Stroke {

@@ -5,6 +5,7 @@ use super::panel::{Frame, PanelStyle, draw_drive_axis, triangle};
 use super::scale::Scale;
 use super::{FigureFile, POPULATION_FILE};
 use crate::recording::DriveKind;
+use crate::summary::numbers::significant_text;
 use crate::summary::population::{PARAMETERS, Population, Row, quantile, unit_of};
 
 /// Most groups drawn; the table has more.
@@ -33,6 +34,7 @@ const STYLE: PanelStyle = PanelStyle {
     strip: 0.0,
     large: false,
     drive_labels: true,
+    verdict_dashes: false,
 };
 
 /// The figure of all kinds of drive that have usable cells, one below the other; `None` without any.
@@ -117,31 +119,26 @@ fn draw_names(canvas: &mut Canvas, rows: &[Row], top: f64) {
     }
 }
 
-/// Range of the axis: all values, or where some lie very far out, four quartile ranges beyond the quartiles.
+/// Quartile ranges beyond the quartiles at which a value is far out (the outer fence of Tukey 1977).
+const FAR_OUT: f64 = 3.0;
+
+/// Range of the axis: that of the values that are not far out, with room at the ends for those that are.
 fn range(ascending: &[f64]) -> Option<(f64, f64)> {
     let (lowest, highest) = (*ascending.first()?, *ascending.last()?);
     let (lower, upper) = (quantile(ascending, 0.25)?, quantile(ascending, 0.75)?);
-    let spread = upper - lower;
-    let (mut low, mut high) = if spread > 0.0 {
-        (
-            lowest.max(lower - 4.0 * spread),
-            highest.min(upper + 4.0 * spread),
-        )
-    } else {
-        (lowest, highest)
-    };
+    let fence = FAR_OUT * (upper - lower);
+    let within = |value: &&f64| **value >= lower - fence && **value <= upper + fence;
+    let mut low = ascending.iter().find(within).copied().unwrap_or(lowest);
+    let mut high = ascending.iter().rev().find(within).copied().unwrap_or(highest);
     if !(high > low) {
         let half = (0.2 * low.abs()).max(1e-3);
         (low, high) = (low - half, high + half);
     }
-    let padding = 0.05 * (high - low);
+    let span = high - low;
+    let room = |far_out: bool| if far_out { 0.3 * span } else { 0.05 * span };
+    let (start, end) = (low - room(lowest < low), high + room(highest > high));
     // No axis below zero where no value is.
-    let start = if low >= 0.0 {
-        (low - padding).max(0.0)
-    } else {
-        low - padding
-    };
-    Some((start, high + padding))
+    Some((if lowest >= 0.0 { start.max(0.0) } else { start }, end))
 }
 
 fn draw_parameter(
@@ -206,10 +203,14 @@ fn draw_dots(canvas: &mut Canvas, ascending: &[f64], x: &Scale, top: f64) {
     let step = 2.0 * RADIUS + 0.2;
     let mut last = [f64::NEG_INFINITY; 5];
     let mut places = Vec::with_capacity(ascending.len());
+    let (mut left, mut right) = (Vec::new(), Vec::new());
     for &value in ascending {
         if !x.holds(value) {
-            let towards = (x.at(value) - x.clamped(value)).signum();
-            triangle(canvas, (x.clamped(value), middle), (towards, 0.0), 7.0);
+            if x.at(value) < x.clamped(value) {
+                left.push(value);
+            } else {
+                right.push(value);
+            }
             continue;
         }
         let at = x.at(value);
@@ -230,6 +231,38 @@ fn draw_dots(canvas: &mut Canvas, ascending: &[f64], x: &Scale, top: f64) {
         }
     }
     canvas.circles(&places, RADIUS, solid(CURVE, 1.0));
+    // Far out: an arrow head with the value, or with the number of values and the farthest.
+    let label = |values: &[f64], farthest: Option<f64>| {
+        let text = farthest.map_or_else(String::new, significant_text);
+        if values.len() > 1 {
+            format!("{} to {text}", values.len())
+        } else {
+            text
+        }
+    };
+    let small = font(9.0);
+    if let Some(value) = left.first() {
+        let at = x.clamped(*value);
+        triangle(canvas, (at, middle), (-1.0, 0.0), 7.0);
+        canvas.text(
+            (at + 9.0, middle + 3.2),
+            &label(&left, left.first().copied()),
+            small,
+        );
+    }
+    if let Some(value) = right.last() {
+        let at = x.clamped(*value);
+        triangle(canvas, (at, middle), (1.0, 0.0), 7.0);
+        let end = Font {
+            anchor: Anchor::End,
+            ..small
+        };
+        canvas.text(
+            (at - 9.0, middle + 3.2),
+            &label(&right, right.last().copied()),
+            end,
+        );
+    }
 }
 
 /// A histogram as one outline; what lies beyond the axis is counted into its end bars.
@@ -308,7 +341,7 @@ fn draw_key(canvas: &mut Canvas, y: f64, dots: bool, bars: bool) {
     let at = say(canvas, 6.0, "median of all");
     canvas.line((at + 3.0, y - 7.0), (at + 3.0, y + 7.0), solid(BAND, 1.2));
     if dots {
-        let at = say(canvas, 8.0, "beyond the axis");
+        let at = say(canvas, 8.0, "beyond the axis, with its value");
         triangle(canvas, (at + 7.0, y), (1.0, 0.0), 7.0);
     }
 }

@@ -27,6 +27,17 @@ fn reach(panel: &Panel) -> f64 {
     if shown > 0.0 { 1.08 * shown } else { 1.0 }
 }
 
+/// Whether some residual lies beyond the axis.
+pub(super) fn has_off_scale(panel: &Panel) -> bool {
+    let reach = reach(panel);
+    panel.has_residuals()
+        && panel
+            .points
+            .iter()
+            .filter_map(|point| point.residual)
+            .any(|residual| residual.hz.abs() > reach)
+}
+
 /// Draws the residuals in `frame` with the drive axis of the panel's curve, without axis names.
 pub(super) fn draw_residuals(canvas: &mut Canvas, panel: &Panel, frame: Frame, style: &PanelStyle) {
     let reach = reach(panel);
@@ -44,7 +55,7 @@ pub(super) fn draw_residuals(canvas: &mut Canvas, panel: &Panel, frame: Frame, s
         let at = (x.clamped(point.drive), y.clamped(residual.hz));
         if !y.holds(residual.hz) {
             // Off the scale: an arrow head at the edge.
-            triangle(canvas, at, (0.0, residual.hz.signum() * -1.0), 2.0 * style.radius);
+            triangle(canvas, at, (0.0, -residual.hz.signum()), 2.0 * style.radius);
             continue;
         }
         if point.role == Role::LeftOut {

@@ -271,7 +271,6 @@ fn draw_stamp(canvas: &mut Canvas, stamp: &Stamp, tile: Frame) {
     }
     let small = Font {
         anchor: Anchor::Middle,
-        colour: PALE,
         ..font(9.0)
     };
     let foot = fit_text(&stamp.foot(), &small, WIDTH - 6.0);

@@ -30,6 +30,7 @@ const STYLE: PanelStyle = PanelStyle {
     strip: 10.0,
     large: false,
     drive_labels: true,
+    verdict_dashes: false,
 };
 
 /// A cell of the strip.
