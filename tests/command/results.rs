@@ -292,3 +292,66 @@ fn a_recording_set_inside_an_earlier_result_folder_survives_overwriting() {
     assert!(inside.join("spikes.csv").exists() && inside.join("protocol.csv").exists());
     assert!(made.out().join("parameters.parquet").exists());
 }
+
+/// Names in `figures/` of the results, sorted; nothing where there is no such folder.
+fn figures(made: &Made) -> Vec<String> {
+    let mut names: Vec<String> = std::fs::read_dir(made.out().join("figures"))
+        .map(|entries| {
+            entries
+                .map(|e| e.unwrap().file_name().to_string_lossy().into_owned())
+                .collect()
+        })
+        .unwrap_or_default();
+    names.sort();
+    names
+}
+
+#[test]
+fn figures_are_drawn_for_the_cells_asked_for() {
+    // One cell loses the steps that a curve needs.
+    let made = Made::with_cells(&["a", "b", "short"]);
+    let protocol: Vec<String> = made
+        .read("protocol.csv")
+        .lines()
+        .enumerate()
+        .filter(|(i, line)| !line.starts_with("\"short\"") || i % 5 == 0)
+        .map(|(_, line)| line.to_owned())
+        .collect();
+    made.write("protocol.csv", protocol.join("\n"));
+    let fit = |more: &[&str]| {
+        let (set, out) = (made.set(), made.out());
+        let mut arguments = vec!["fit", text(&set), "--out", text(&out), "--quiet", "--overwrite"];
+        arguments.extend(more);
+        halfrise(&arguments)
+    };
+    let of_the_set = ["overview.svg", "population.svg", "sheet-01.svg", "worst.svg"];
+    let with = |cells: &[&str]| {
+        let mut names: Vec<String> = of_the_set.iter().chain(cells).map(|s| (*s).to_owned()).collect();
+        names.sort();
+        names
+    };
+    fit(&["--responses", "whole"]).succeeds();
+    assert_eq!(figures(&made), with(&["a.svg", "b.svg", "short.svg"]));
+    fit(&["--responses", "whole", "--figures", "flagged"]).succeeds();
+    assert_eq!(figures(&made), with(&["short.svg"]));
+    let run = std::fs::read_to_string(made.out().join("run.json")).unwrap();
+    let run: serde_json::Value = serde_json::from_str(&run).unwrap();
+    assert!(run.to_string().contains("\"figures\":\"flagged\""), "{run}");
+    for none in [&["--figures", "none"][..], &["--no-figures"]] {
+        fit(none).succeeds();
+        assert!(figures(&made).is_empty());
+    }
+    fit(&["--figures", "some"]).fails(2, &["some", "flagged"]);
+    fit(&["--figures", "all", "--no-figures"]).fails(2, &["--no-figures"]);
+    // The same as a key of the set; what is typed comes first.
+    made.write(
+        "recording.toml",
+        "[analysis]\nfigures = \"flagged\"\nresponses = [\"whole\"]\n",
+    );
+    fit(&[]).succeeds();
+    assert_eq!(figures(&made), with(&["short.svg"]));
+    fit(&["--figures", "all"]).succeeds();
+    assert_eq!(figures(&made), with(&["a.svg", "b.svg", "short.svg"]));
+    made.write("recording.toml", "[analysis]\nfigures = \"some\"\n");
+    fit(&[]).fails(2, &["recording.toml", "some"]);
+}

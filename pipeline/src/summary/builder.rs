@@ -261,7 +261,15 @@ impl SummaryBuilder {
 
     fn verdict_section(&self) -> String {
         let mut text = String::from("## What the data say about the ceiling\n\n");
-        text.push_str("Number of cells with each verdict, by response.\n\n");
+        if let Some((response, first)) = self.verdicts.first() {
+            text.push_str(&format!(
+                "**{} of {} cells are usable** by the response `{}`: fitted, ceiling resolved or loose, rejected by no \
+                 flag. Number of cells with each verdict, by response:\n\n",
+                count_text(first.usable),
+                count_text(self.cells),
+                response.name()
+            ));
+        }
         text.push_str(&table_head(&[
             ("response", false),
             ("cells", true),

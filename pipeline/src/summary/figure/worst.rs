@@ -121,10 +121,10 @@ fn draw_cell(canvas: &mut Canvas, place: usize, cell: &WorstCell, (start, top): 
     };
     let number = format!("{place}.");
     canvas.text((start, top + 13.0), &number, name);
-    draw_symbol(canvas, Glance::of(&cell.panel), (start + 25.0, top + 9.0), 4.6);
+    draw_symbol(canvas, Glance::of(&cell.panel), (start + 30.0, top + 9.0), 4.6);
     canvas.text(
-        (start + 35.0, top + 13.0),
-        &fit_text(&cell.id, &name, room - 35.0),
+        (start + 40.0, top + 13.0),
+        &fit_text(&cell.id, &name, room - 40.0),
         name,
     );
     // Verdict first, then the flags as far as there is room.
