@@ -3,7 +3,7 @@
 use std::cmp::Reverse;
 use std::collections::BTreeMap;
 
-use super::distrust::{Distrust, LISTED};
+use super::distrust::Distrust;
 use super::figure::{
     ContactSheets, FigureFile, OVERVIEW_FILE, Overview, POPULATION_FILE, WORST_FILE, population_figure,
     worst_figure, worth_drawing,
@@ -313,6 +313,7 @@ impl SummaryBuilder {
     fn distrust_section(&self) -> String {
         let mut text = String::from("## Cells to distrust first\n\n");
         let suspects = self.distrust.suspects();
+        let rows = self.distrust.rows();
         if suspects == 0 {
             text.push_str("None: every cell is fitted, resolved and free of cautions.\n\n");
             return text;
@@ -323,17 +324,20 @@ impl SummaryBuilder {
             count_text(suspects),
             count_text(self.cells),
             self.first_response(),
-            if suspects > LISTED as u64 {
-                format!("; the {LISTED} to look at first are shown, the rest is in parameters.parquet and flags.parquet")
+            if suspects > rows.len() as u64 {
+                format!(
+                    "; {} of them are shown, the rest is in parameters.parquet and flags.parquet",
+                    count_text(rows.len() as u64)
+                )
             } else {
                 String::new()
             }
         ));
         if self.has_figure(WORST_FILE) {
-            let drawn = self.distrust.drawn().len();
             text.push_str(&format!(
-                "![The cells to distrust first that have steps to draw](figures/{WORST_FILE})\n\nThe {drawn} worst that \
-                 have steps to draw; their numbers stand in the first column.\n\n"
+                "![The cells to distrust first, with their step rates and fits](figures/{WORST_FILE})\n\nDrawn are the \
+                 first {} whose steps hold an interval, with the number of the first column.\n\n",
+                self.distrust.drawn().len()
             ));
         }
         text.push_str(&table_head(&[
@@ -342,15 +346,16 @@ impl SummaryBuilder {
             ("group", false),
             ("why", false),
         ]));
-        for (number, cell, group, reasons, figure) in self.distrust.rows() {
-            let name = figure.map_or_else(
-                || cell.to_string(),
-                |file| format!("[{cell}](figures/{})", link_target(file)),
+        for row in rows {
+            let name = row.figure.map_or_else(
+                || row.cell.to_string(),
+                |file| format!("[{}](figures/{})", row.cell, link_target(file)),
             );
-            let number = number
+            let number = row
+                .in_figure
                 .filter(|_| self.has_figure(WORST_FILE))
                 .map_or_else(String::new, |number| number.to_string());
-            text.push_str(&table_row(&[&number, &name, group, reasons]));
+            text.push_str(&table_row(&[&number, &name, row.group, row.reasons]));
         }
         text.push('\n');
         text

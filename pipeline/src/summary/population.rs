@@ -6,7 +6,7 @@ use std::sync::Arc;
 use super::numbers::{count_text, estimate_text};
 use super::text::{ID_LENGTH, id_markdown, table_head, table_row, visible};
 use crate::assess::{CellResult, Estimate};
-use crate::recording::DriveKind;
+use crate::recording::{DriveKind, natural};
 
 /// Most groups in the table; with more, the largest are shown.
 const GROUPS_LISTED: usize = 20;
@@ -109,10 +109,15 @@ impl Population {
                 group.push(sample);
             }
         }
-        let names = self
+        let mut named: Vec<(&Arc<str>, usize)> = self
             .groups
             .iter()
-            .map(|(name, number)| (visible(name, ID_LENGTH), *number as usize))
+            .map(|(name, number)| (name, *number as usize))
+            .collect();
+        named.sort_by(|(a, _), (b, _)| natural(a, b));
+        let names = named
+            .into_iter()
+            .map(|(name, place)| (visible(name, ID_LENGTH), place))
             .chain([("no group".into(), self.groups.len())]);
         let mut groups: Vec<(String, &Vec<&Sample>)> = names
             .filter_map(|(name, place)| members.get(place).map(|cells| (name, cells)))
@@ -277,7 +282,7 @@ mod tests {
     #[test]
     fn groups_are_told_apart_and_the_largest_are_kept() {
         let mut population = Population::default();
-        for (group, cells) in [("b", 3), ("a", 2), ("c", 1), ("d", 2)] {
+        for (group, cells) in [("b10", 3), ("b9", 2), ("c", 1), ("d", 2)] {
             for i in 0..cells {
                 population.add(&one(Some(group), 10.0 + f64::from(i), DriveKind::Current));
             }
@@ -287,8 +292,8 @@ mod tests {
             let (rows, _) = population.rows(DriveKind::Current, most);
             rows.into_iter().filter_map(|row| row.group).collect()
         };
-        assert_eq!(names(8), ["a", "b", "c", "d", "no group"]);
-        assert_eq!(names(2), ["a", "b"]);
+        assert_eq!(names(8), ["b9", "b10", "c", "d", "no group"]);
+        assert_eq!(names(2), ["b9", "b10"]);
         assert_eq!(population.rows(DriveKind::Current, 2).1, 3);
     }
 

@@ -269,14 +269,14 @@ fn the_summary_says_what_was_read_refused_found_and_how() {
         .iter()
         .map(|row| [row[0].as_str(), row[1].as_str()])
         .collect();
-    // Silent has no fit; then declining, open, the loose one with a caution; the resolved one is not listed.
+    // Silent has no fit, and no interval to draw; then declining, open, the loose one with a caution; the resolved one is not listed.
     assert_eq!(
         order,
         [
-            ["1", "[c4](figures/c4.svg)"],
-            ["2", "[c3](figures/c3.svg)"],
-            ["3", "[c2](figures/c2.svg)"],
-            ["4", "[c1](figures/c1.svg)"],
+            ["", "[c4](figures/c4.svg)"],
+            ["1", "[c3](figures/c3.svg)"],
+            ["2", "[c2](figures/c2.svg)"],
+            ["3", "[c1](figures/c1.svg)"],
         ]
     );
 }
@@ -324,7 +324,7 @@ fn many_cells_are_counted_and_few_are_kept() {
         .iter()
         .filter(|t| t.ends_with('.') && t.trim_end_matches('.').parse::<u8>().is_ok());
     assert_eq!(places.count(), 10);
-    assert!(markdown.contains("300 of 300 cells") && markdown.contains("the 25 to look at first"));
+    assert!(markdown.contains("300 of 300 cells") && markdown.contains("25 of them are shown"));
     assert!(markdown.contains("The first 200 of 300 cells are shown"));
     let texts = texts(built.figure(OVERVIEW_FILE));
     assert!(
@@ -338,6 +338,33 @@ fn many_cells_are_counted_and_few_are_kept() {
     assert_eq!(
         shown.max_by_key(|t| t[1..].parse::<u32>().unwrap()).unwrap(),
         "n295"
+    );
+}
+
+#[test]
+fn cells_that_are_drawn_are_listed_behind_many_silent_ones() {
+    let mut cells: Vec<CellResult> = (0..30).map(|i| cell(&format!("s{i}"), Ceiling::Silent)).collect();
+    cells.extend((0..3).map(|i| cell(&format!("o{i}"), Ceiling::Open)));
+    let built = build(&set("silent", &cells), &cells, &Analysis::default());
+    let tables = tables(&built.markdown);
+    let rows = &distrusted(&tables)[2..];
+    assert_eq!(rows.len(), 25 + 3);
+    assert!(
+        rows[..25]
+            .iter()
+            .all(|row| row[0].is_empty() && row[1].starts_with("[s"))
+    );
+    let drawn: Vec<[&str; 2]> = rows[25..]
+        .iter()
+        .map(|row| [row[0].as_str(), row[1].as_str()])
+        .collect();
+    assert_eq!(
+        drawn,
+        [
+            ["1", "[o0](figures/o0.svg)"],
+            ["2", "[o1](figures/o1.svg)"],
+            ["3", "[o2](figures/o2.svg)"]
+        ]
     );
 }
 

@@ -110,6 +110,26 @@ pub(super) fn fit_text(text: &str, font: &Font, width: f64) -> String {
     cut
 }
 
+/// The text, cut in its middle where it would be wider than `width`: names often differ at their ends alone.
+pub(super) fn fit_name(text: &str, font: &Font, width: f64) -> String {
+    if text_width(text, font) <= width {
+        return text.to_string();
+    }
+    let characters: Vec<char> = text.chars().collect();
+    let cut = |kept: usize| -> String {
+        let (head, tail) = (kept - kept / 2, kept / 2);
+        let mut name: String = characters.iter().take(head).collect();
+        name.push('…');
+        name.extend(characters.iter().skip(characters.len().saturating_sub(tail)));
+        name
+    };
+    (0..characters.len())
+        .rev()
+        .map(cut)
+        .find(|name| text_width(name, font) <= width)
+        .unwrap_or_else(|| "…".into())
+}
+
 /// The text broken at blanks into at most `lines` lines of `width`; the last is cut with an ellipsis.
 pub(super) fn wrap_text(text: &str, font: &Font, width: f64, lines: usize) -> Vec<String> {
     let mut wrapped: Vec<String> = Vec::new();
@@ -356,6 +376,19 @@ mod tests {
         assert_eq!(number(-12.5), "-12.5");
         assert_eq!(number(100.0), "100");
         assert_eq!(number(f64::NAN), "0");
+    }
+
+    #[test]
+    fn names_are_cut_in_their_middle() {
+        let small = font(10.0);
+        let names = ["rig A, slice 12, neuron 7", "rig A, slice 12, neuron 8"];
+        let cut = names.map(|name| fit_name(name, &small, 70.0));
+        assert_ne!(cut[0], cut[1]);
+        for name in &cut {
+            assert!(text_width(name, &small) <= 70.0 && name.starts_with("rig") && name.contains('…'));
+        }
+        assert_eq!(fit_name("A-01", &small, 70.0), "A-01");
+        assert_eq!(fit_name("A-01", &small, 1.0), "…");
     }
 
     #[test]

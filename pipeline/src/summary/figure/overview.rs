@@ -1,12 +1,12 @@
 //! The figure of a set: one small panel a cell.
 
-use super::canvas::{Anchor, Canvas, Font, PALE, fit_text, font, wrap_text};
+use super::canvas::{Anchor, Canvas, Font, PALE, fit_name, fit_text, font, wrap_text};
 use super::legend::{Mark, draw_legend, legend_height};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel};
 use crate::assess::{Ceiling, CellResult};
 use crate::recording::RecordingSet;
 use crate::summary::numbers::count_text;
-use crate::summary::text::{ID_LENGTH, visible};
+use crate::summary::text::{ID_LENGTH, id_visible, visible};
 
 /// Most cells drawn.
 const MOST_CELLS: u64 = 60;
@@ -75,7 +75,7 @@ impl Overview {
         let chosen = all <= most || place == 0 || place * most / all != (place - 1) * most / all;
         if chosen && (self.drawn.len() as u64) < MOST_CELLS {
             self.drawn.push(Digest {
-                id: visible(&cell.id.0, ID_LENGTH),
+                id: id_visible(&cell.id.0),
                 panel: Panel::new(cell, first, 80, 50),
             });
         }
@@ -174,7 +174,7 @@ impl Overview {
                 bold: true,
                 ..font(9.0)
             };
-            canvas.text((frame.left, top + 14.0), &fit_text(&digest.id, &name, room), name);
+            canvas.text((frame.left, top + 14.0), &fit_name(&digest.id, &name, room), name);
             let verdict = if mixed {
                 format!("{}, {}", digest.panel.verdict(), digest.panel.unit)
             } else {

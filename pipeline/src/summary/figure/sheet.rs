@@ -1,6 +1,6 @@
 //! Contact sheets: every cell of a set as a stamp whose frame, ground and symbol tell the verdict.
 
-use super::canvas::{Anchor, CURVE, Canvas, Font, PALE, POINT, fit_text, font, solid, text_width};
+use super::canvas::{Anchor, CURVE, Canvas, Font, PALE, POINT, fit_name, fit_text, font, solid, text_width};
 use super::mark::{Glance, draw_symbol, draw_tile};
 use super::miniature::draw_miniature;
 use super::panel::{Frame, Panel};
@@ -8,7 +8,7 @@ use super::{FigureFile, worth_drawing};
 use crate::assess::{CellResult, Status};
 use crate::recording::RecordingSet;
 use crate::summary::numbers::{count_text, significant_text};
-use crate::summary::text::{ID_LENGTH, visible};
+use crate::summary::text::{ID_LENGTH, id_visible, visible};
 
 /// Cells on a page.
 pub(super) const CELLS_A_PAGE: usize = 48;
@@ -84,7 +84,7 @@ impl ContactSheets {
         }
         let first = cell.responses.first();
         self.stamps.push(Stamp {
-            id: visible(&cell.id.0, ID_LENGTH),
+            id: id_visible(&cell.id.0),
             panel: first
                 .filter(|_| !cell.steps.is_empty())
                 .map(|first| Panel::new(cell, first, 60, 50)),
@@ -258,7 +258,7 @@ fn draw_stamp(canvas: &mut Canvas, stamp: &Stamp, tile: Frame) {
         bold: true,
         ..font(9.5)
     };
-    let id = fit_text(&stamp.id, &name, WIDTH - 24.0);
+    let id = fit_name(&stamp.id, &name, WIDTH - 24.0);
     canvas.text((tile.left + 19.0, tile.top + 13.0), &id, name);
     if let Some(panel) = &stamp.panel {
         let frame = Frame {

@@ -2,12 +2,12 @@
 
 use super::FigureFile;
 use super::WORST_FILE;
-use super::canvas::{Anchor, Canvas, Font, PALE, fit_text, font, wrap_text};
+use super::canvas::{Anchor, Canvas, Font, PALE, fit_name, font, wrap_text};
 use super::legend::{Mark, draw_legend, legend_height};
 use super::mark::{Glance, draw_symbol};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel};
 use crate::assess::{CellResult, Severity};
-use crate::summary::text::{ID_LENGTH, visible};
+use crate::summary::text::id_visible;
 
 /// Cells shown.
 pub(in crate::summary) const WORST: usize = 10;
@@ -41,9 +41,13 @@ pub(in crate::summary) struct WorstCell {
 }
 
 impl WorstCell {
-    /// The cell by its first response; `None` without steps or responses, where there is nothing to draw.
+    /// The cell by its first response; `None` without steps or responses, and where no step of it holds an interval:
+    /// rows of zeros tell nothing that the word does not.
     pub(in crate::summary) fn new(cell: &CellResult) -> Option<Self> {
         let first = cell.responses.first().filter(|_| !cell.steps.is_empty())?;
+        if first.rates.iter().all(|rate| rate.intervals == 0) {
+            return None;
+        }
         let mut names: Vec<&str> = Vec::new();
         for severity in [Severity::Reject, Severity::Caution] {
             let flags = cell.responses.iter().flat_map(|response| &response.flags);
@@ -55,7 +59,7 @@ impl WorstCell {
         }
         let panel = Panel::new(cell, first, 100, 60);
         Some(Self {
-            id: visible(&cell.id.0, ID_LENGTH),
+            id: id_visible(&cell.id.0),
             flags: names.join(", "),
             panel,
         })
@@ -124,7 +128,7 @@ fn draw_cell(canvas: &mut Canvas, place: usize, cell: &WorstCell, (start, top): 
     draw_symbol(canvas, Glance::of(&cell.panel), (start + 30.0, top + 9.0), 4.6);
     canvas.text(
         (start + 40.0, top + 13.0),
-        &fit_text(&cell.id, &name, room - 40.0),
+        &fit_name(&cell.id, &name, room - 40.0),
         name,
     );
     // Verdict first, then the flags as far as there is room.
