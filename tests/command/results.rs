@@ -24,16 +24,25 @@ fn same_bytes_for_one_thread_and_two() {
                 "--threads",
                 threads,
                 "--quiet",
-                "--no-figures",
             ];
             halfrise(&arguments).succeeds();
             let mut all = tables(&out);
+            let mut drawn: Vec<_> = std::fs::read_dir(out.join("figures"))
+                .unwrap()
+                .map(|e| e.unwrap().path())
+                .collect();
+            drawn.sort();
+            assert!(drawn.len() > 20, "{drawn:?}");
+            for path in drawn {
+                let name = path.file_name().unwrap().to_string_lossy().into_owned();
+                all.push((name, std::fs::read(&path).unwrap()));
+            }
             for text_file in ["summary.md", "run.json"] {
                 all.push((text_file.into(), std::fs::read(out.join(text_file)).unwrap()));
             }
             runs.push(all);
         }
-        assert_eq!(runs[0].len(), 8);
+        assert_eq!(runs[0].len(), runs[1].len());
         for (one, two) in runs[0].iter().zip(&runs[1]) {
             assert!(one == two, "{set}: {} differs", one.0);
         }

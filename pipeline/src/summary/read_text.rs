@@ -124,7 +124,12 @@ pub(super) fn what_was_read_and_refused(set: &RecordingSet) -> String {
         .iter()
         .take(REASONS_NAMED)
         .map(|((table, reason), rows)| {
-            format!("{} {} ({})", count_text(*rows), id_markdown(reason), table.name())
+            format!(
+                "{} {} in {}",
+                count_text(*rows),
+                id_markdown(reason),
+                table.name()
+            )
         })
         .collect();
     match more {
@@ -135,15 +140,15 @@ pub(super) fn what_was_read_and_refused(set: &RecordingSet) -> String {
     let list = if named.is_empty() {
         String::new()
     } else {
-        format!(": {}", named.join(", "))
+        format!(" ({})", named.join(", "))
     };
     let whole = match cells {
         0 => String::new(),
-        1 => "; 1 whole cell".into(),
-        n => format!("; {} whole cells", count_text(n as u64)),
+        1 => " and 1 whole cell".into(),
+        n => format!(" and {} whole cells", count_text(n as u64)),
     };
     text.push_str(&format!(
-        "Refused rows: {}{list}{whole}. Each reason with an example stands under [What was refused and \
+        "Refused: {} rows{list}{whole}. Each reason with an example stands under [What was refused and \
          why](#what-was-refused-and-why), each row in refused.parquet.\n\n",
         count_text(set.refused.len() as u64)
     ));

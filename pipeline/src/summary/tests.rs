@@ -226,6 +226,8 @@ fn the_summary_says_what_was_read_refused_found_and_how() {
         "| spikes | time-not-a-number | 2 | spikes&#124;a.csv, row 7, cell c&#124;1, spike_time_s = n/a &lt;b&gt;\\\\n |",
         "times are in ms",
         "| whole | 5 | 1 | 1 | 1 | 1 | 1 | 0 | 4 | 2 |",
+        "Refused: 2 rows (2 time-not-a-number in spikes). Each reason",
+        "**2 of 5 cells are usable** by the response `whole`",
         "(figures/overview.svg)",
         "| [c0](figures/c0.svg) | L5 pyramidal | resolved | yes | 120 (113 to 129) | 110 (98 to 124) | 42 (36 to 47) |",
         "not determined (above 310, no upper bound)",
@@ -759,4 +761,21 @@ fn a_large_population_is_a_histogram_of_few_elements() {
     // The small set has its cells one by one.
     let built = build(&set("few", &cells[..20]), &cells[..20], &Analysis::default());
     assert!(built.figure(POPULATION_FILE).contains("a usable cell"));
+}
+
+#[test]
+fn current_and_conductance_cells_have_distributions_of_their_own() {
+    let mut cells = [cell("pA", Ceiling::Resolved), cell("nS", Ceiling::Resolved)];
+    cells[1].drive_kind = DriveKind::Conductance;
+    let built = build(&set("mixed", &cells), &cells, &Analysis::default());
+    let texts = texts(built.figure(POPULATION_FILE));
+    for text in [
+        "current steps (pA)",
+        "conductance steps (nS)",
+        "threshold (pA)",
+        "threshold (nS)",
+    ] {
+        assert!(texts.iter().any(|t| t == text), "{text}: {texts:?}");
+    }
+    assert_eq!(texts.iter().filter(|t| *t == "1 cell").count(), 2);
 }

@@ -117,29 +117,33 @@ pub(super) fn draw_tile(canvas: &mut Canvas, glance: Glance, tile: Frame) {
     canvas.path(&line, glance.frame_stroke());
 }
 
-/// The symbol of a verdict: disc, half disc, triangle up, triangle down, square with a cross, bar.
+/// The symbol of a verdict: disc, half disc, triangle up, triangle down, square with a cross, bar. Light colours have a
+/// dark outline.
 pub(super) fn draw_symbol(canvas: &mut Canvas, glance: Glance, (x, y): (f64, f64), r: f64) {
     let colour = glance.colour();
+    let outline = solid(INK, 0.7);
+    let mut triangle = |tip: f64, base: f64| {
+        let corners = [(x, y + tip), (x + r, y + base), (x - r, y + base)];
+        canvas.area(&corners, colour, 1.0);
+        let [first, second, third] = corners;
+        canvas.path(&[first, second, third, first, second], outline);
+    };
     match glance {
-        Glance::Resolved => canvas.disc((x, y), 0.85 * r, colour),
-        Glance::Loose => {
-            canvas.circle((x, y), 0.8 * r, solid(colour, 1.4));
-            canvas.area(
-                &[(x - 0.8 * r, y), (x + 0.8 * r, y), (x, y + 0.9 * r)],
-                colour,
-                1.0,
-            );
+        Glance::Resolved => {
+            canvas.disc((x, y), 0.85 * r, colour);
+            canvas.circle((x, y), 0.85 * r, outline);
         }
-        Glance::Open => canvas.area(
-            &[(x, y - r), (x + r, y + 0.8 * r), (x - r, y + 0.8 * r)],
-            colour,
-            1.0,
-        ),
-        Glance::Declining => canvas.area(
-            &[(x, y + r), (x + r, y - 0.8 * r), (x - r, y - 0.8 * r)],
-            colour,
-            1.0,
-        ),
+        Glance::Loose => {
+            // The lower half, as a polygon fine enough for its size.
+            let half: Vec<(f64, f64)> = (0..=12)
+                .map(|i| f64::from(i) * std::f64::consts::PI / 12.0)
+                .map(|angle| (x + 0.85 * r * angle.cos(), y + 0.85 * r * angle.sin()))
+                .collect();
+            canvas.area(&half, colour, 1.0);
+            canvas.circle((x, y), 0.85 * r, outline);
+        }
+        Glance::Open => triangle(-r, 0.8 * r),
+        Glance::Declining => triangle(r, -0.8 * r),
         Glance::Rejected => {
             let s = 0.95 * r;
             canvas.area(

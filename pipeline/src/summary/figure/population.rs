@@ -5,7 +5,7 @@ use super::panel::{Frame, PanelStyle, draw_drive_axis, triangle};
 use super::scale::Scale;
 use super::{FigureFile, POPULATION_FILE};
 use crate::recording::DriveKind;
-use crate::summary::numbers::significant_text;
+use crate::summary::numbers::{count_text, significant_text};
 use crate::summary::population::{PARAMETERS, Population, Row, quantile, unit_of};
 
 /// Most groups drawn; the table has more.
@@ -94,7 +94,8 @@ pub(in crate::summary) fn population_figure(population: &Population, response: &
         }
         top += block_height(rows.len());
     }
-    draw_key(&mut canvas, top + 10.0, dots, bars);
+    let groups = blocks.iter().any(|(_, rows, _)| rows.len() > 1);
+    draw_key(&mut canvas, top + 10.0, dots, bars, groups);
     Some(FigureFile {
         name: POPULATION_FILE.into(),
         svg: canvas.finish(),
@@ -115,7 +116,11 @@ fn draw_names(canvas: &mut Canvas, rows: &[Row], top: f64) {
             ..font(9.0)
         };
         let cells = if row.cells == 1 { "cell" } else { "cells" };
-        canvas.text((EDGE, y + 28.0), &format!("{} {cells}", row.cells), count);
+        canvas.text(
+            (EDGE, y + 28.0),
+            &format!("{} {cells}", count_text(row.cells as u64)),
+            count,
+        );
     }
 }
 
@@ -303,7 +308,7 @@ fn draw_quartiles(canvas: &mut Canvas, ascending: &[f64], x: &Scale, y: f64) {
     canvas.line((at, y - 4.0), (at, y + 4.0), solid(INK, 2.2));
 }
 
-fn draw_key(canvas: &mut Canvas, y: f64, dots: bool, bars: bool) {
+fn draw_key(canvas: &mut Canvas, y: f64, dots: bool, bars: bool, groups: bool) {
     let small = font(10.0);
     let mut x = EDGE;
     let mut say = |canvas: &mut Canvas, symbol: f64, text: &str| {
@@ -320,7 +325,7 @@ fn draw_key(canvas: &mut Canvas, y: f64, dots: bool, bars: bool) {
         let at = say(
             canvas,
             16.0,
-            "number of usable cells, tallest bar of each row alike",
+            "number of usable cells, each row by its own scale, those beyond the axis in its end bars",
         );
         canvas.area(
             &[
@@ -338,8 +343,10 @@ fn draw_key(canvas: &mut Canvas, y: f64, dots: bool, bars: bool) {
     let at = say(canvas, 24.0, "quartiles and median");
     canvas.line((at, y), (at + 24.0, y), solid(PALE, 2.4));
     canvas.line((at + 11.0, y - 4.0), (at + 11.0, y + 4.0), solid(INK, 2.2));
-    let at = say(canvas, 6.0, "median of all");
-    canvas.line((at + 3.0, y - 7.0), (at + 3.0, y + 7.0), solid(BAND, 1.2));
+    if groups {
+        let at = say(canvas, 6.0, "median of all");
+        canvas.line((at + 3.0, y - 7.0), (at + 3.0, y + 7.0), solid(BAND, 1.2));
+    }
     if dots {
         let at = say(canvas, 8.0, "beyond the axis, with its value");
         triangle(canvas, (at + 7.0, y), (1.0, 0.0), 7.0);
