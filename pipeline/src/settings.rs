@@ -1,12 +1,13 @@
 //! Every analysis setting with its default. Each is a key of `[analysis]` in `recording.toml` and a flag of the
 //! command line; the values used are written to `run.json`.
 
-use serde::{Deserialize, Serialize};
+use serde::de::Visitor;
+use serde::{Deserialize, Deserializer, Serialize};
 
 use crate::rates::Response;
 
 /// Which cells get a figure of their own. Contact sheets and the other figures of the set show all cells.
-#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum CellFigures {
     /// Every cell with steps.
@@ -16,6 +17,30 @@ pub enum CellFigures {
     Flagged,
     /// No figure at all, not even of the set.
     None,
+}
+
+/// By hand, so that `figures = true` is told what to write instead.
+impl<'de> Deserialize<'de> for CellFigures {
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
+        struct Word;
+        impl Visitor<'_> for Word {
+            type Value = CellFigures;
+
+            fn expecting(&self, formatter: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+                formatter.write_str("\"all\", \"flagged\" or \"none\"")
+            }
+
+            fn visit_str<E: serde::de::Error>(self, word: &str) -> Result<CellFigures, E> {
+                match word {
+                    "all" => Ok(CellFigures::All),
+                    "flagged" => Ok(CellFigures::Flagged),
+                    "none" => Ok(CellFigures::None),
+                    other => Err(E::unknown_variant(other, &["all", "flagged", "none"])),
+                }
+            }
+        }
+        deserializer.deserialize_str(Word)
+    }
 }
 
 /// The analysis settings of one run.

@@ -361,6 +361,8 @@ fn figures_are_drawn_for_the_cells_asked_for() {
     assert_eq!(figures(&made), with(&["short.svg"]));
     fit(&["--figures", "all"]).succeeds();
     assert_eq!(figures(&made), with(&["a.svg", "b.svg", "short.svg"]));
-    made.write("recording.toml", "[analysis]\nfigures = \"some\"\n");
-    fit(&[]).fails(2, &["recording.toml", "some"]);
+    for wrong in ["\"some\"", "true", "3"] {
+        made.write("recording.toml", format!("[analysis]\nfigures = {wrong}\n"));
+        fit(&[]).fails(2, &["recording.toml", "line 2", "all", "flagged", "none"]);
+    }
 }
