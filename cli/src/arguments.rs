@@ -5,7 +5,7 @@ use std::path::PathBuf;
 
 use clap::{Args, Parser, Subcommand, ValueEnum};
 use halfrise::rates::Response;
-use halfrise::settings::Analysis;
+use halfrise::settings::{Analysis, CellFigures};
 
 /// Turns recordings of many neurons under stepped input into rate functions, with intervals and a verdict on each
 /// cell's ceiling.
@@ -94,6 +94,17 @@ pub enum ResponseName {
     Onset,
 }
 
+/// Which cells get a figure, as typed.
+#[derive(Clone, Copy, Debug, ValueEnum)]
+pub enum FiguresName {
+    /// Every cell with steps
+    All,
+    /// Cells with a flag of severity caution or reject, or with a response without a usable fit
+    Flagged,
+    /// No figures, not even of the set
+    None,
+}
+
 /// One flag for every key of `[analysis]`.
 #[derive(Debug, Default, Args)]
 #[command(next_help_heading = "Analysis settings (also keys of [analysis] in recording.toml)")]
@@ -110,9 +121,15 @@ pub struct SettingArguments {
     /// Leave out the profile intervals
     #[arg(long)]
     pub no_profiles: bool,
-    /// Draw no figures
-    #[arg(long)]
+    /// Cells that get a figure of their own [default: all]
+    #[arg(long, value_enum, value_name = "WHICH")]
+    pub figures: Option<FiguresName>,
+    /// Draw no figures: the same as --figures none
+    #[arg(long, conflicts_with = "figures")]
     pub no_figures: bool,
+    /// Draw the other rate functions into the figure of each cell
+    #[arg(long)]
+    pub draw_rivals: bool,
     /// Steps with a rate from intervals below which a response is silent [default: 3]
     #[arg(long, value_name = "N")]
     pub min_interval_steps: Option<usize>,
@@ -173,7 +190,17 @@ impl SettingArguments {
                 .collect();
         }
         analysis.profiles &= !self.no_profiles;
-        analysis.figures &= !self.no_figures;
+        if let Some(figures) = self.figures {
+            analysis.figures = match figures {
+                FiguresName::All => CellFigures::All,
+                FiguresName::Flagged => CellFigures::Flagged,
+                FiguresName::None => CellFigures::None,
+            };
+        }
+        if self.no_figures {
+            analysis.figures = CellFigures::None;
+        }
+        analysis.draw_rivals |= self.draw_rivals;
         set(&mut analysis.steady_fraction, self.steady_fraction);
         set(&mut analysis.lvr_refractory_s, self.lvr_refractory_s);
         set(&mut analysis.min_interval_steps, self.min_interval_steps);

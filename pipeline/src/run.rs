@@ -16,18 +16,15 @@ use crate::fit::solver::Solution;
 use crate::fit::{Estimates, Point, estimates, t_quantile};
 use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_rates};
 use crate::recording::{CellRecording, DriveKind, ReadError, ReadOptions, RecordingSet, read};
-use crate::settings::{Analysis, SettingsError};
+use crate::settings::{Analysis, CellFigures, SettingsError};
 use crate::steps::meet;
 use crate::summary::SummaryBuilder;
-use crate::summary::figure::{FigureNames, OVERVIEW_FILE, cell_figure};
+use crate::summary::figure::{FigureNames, cell_figure, gets_figure};
 use crate::tables::{Counts, Provenance, ResultFolder, TableContext, Tables, WriteError, WrittenTable};
 
 /// Cells analysed together. The results of a batch are written and forgotten while the next is analysed: memory does
 /// not grow with the set's results.
 const CELLS_AT_ONCE: usize = 256;
-
-/// In a set of more cells than this, a cell without a single interval gets no figure.
-const CELLS_ALL_DRAWN: usize = 5000;
 
 /// What to do.
 pub struct Job<'a> {
@@ -170,7 +167,7 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     (job.adjust)(&mut set.analysis);
     set.analysis.validate()?;
     let settings = set.analysis.clone();
-    let draw = settings.figures && !job.rates_only;
+    let draw = settings.figures != CellFigures::None && !job.rates_only;
 
     let context = TableContext {
         drive_kinds: set.drive_kinds(),
@@ -191,15 +188,19 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
 
     let cells = std::mem::take(&mut set.cells);
     (job.progress)(Progress::Cells(cells.len() as u64));
-    // In a very large set a picture of nothing is not worth its file.
-    let draw_all = cells.len() <= CELLS_ALL_DRAWN;
+    let in_set = cells.len();
     let mut cells = cells.into_iter();
     let mut keep = |analysed: Analysed| -> Result<(), RunError> {
         let (results, drawn): (Vec<CellResult>, Vec<Option<String>>) = analysed.into_iter().unzip();
         tables.write(&results)?;
         counts.add(&results);
+        if job.rates_only {
+            return Ok(());
+        }
         for (result, figure) in results.iter().zip(&drawn) {
-            summary.add(result, figure.as_deref());
+            if let Some(page) = summary.add(result, figure.as_deref()) {
+                write_text(&figures.join(&page.name), &page.svg)?;
+            }
         }
         Ok(())
     };
@@ -221,15 +222,9 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
                 return Err(RunError::Interrupted);
             }
             let result = analyse_cell(&cell, &settings, job.rates_only);
-            let shows = draw_all
-                || result
-                    .responses
-                    .iter()
-                    .flat_map(|r| &r.rates)
-                    .any(|r| r.intervals > 0);
             let mut drawn = None;
-            if let Some(name) = figure.filter(|_| shows)
-                && let Some(svg) = cell_figure(&result)
+            if let Some(name) = figure.filter(|_| gets_figure(&result, in_set, settings.figures))
+                && let Some(svg) = cell_figure(&result, settings.draw_rivals)
             {
                 write_text(&figures.join(&name), &svg)?;
                 drawn = Some(name);
@@ -256,8 +251,8 @@ pub fn run(job: &Job<'_>) -> Result<Outcome, RunError> {
     (job.progress)(Progress::Finishing);
     let written = tables.finish()?;
     if !job.rates_only {
-        if let Some(svg) = draw.then(|| summary.overview_figure()).flatten() {
-            write_text(&figures.join(OVERVIEW_FILE), &svg)?;
+        for figure in summary.closing_figures() {
+            write_text(&figures.join(&figure.name), &figure.svg)?;
         }
         write_text(&folder.path().join("summary.md"), &summary.finish())?;
     }
@@ -399,6 +394,7 @@ impl Case<'_> {
             covariance: None,
             goodness: Vec::new(),
             curve: Vec::new(),
+            rivals: Vec::new(),
             rates: Vec::new(),
         };
         let mut found: Option<(MainFit, Estimates)> = None;

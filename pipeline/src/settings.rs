@@ -1,9 +1,47 @@
 //! Every analysis setting with its default. Each is a key of `[analysis]` in `recording.toml` and a flag of the
 //! command line; the values used are written to `run.json`.
 
-use serde::{Deserialize, Serialize};
+use serde::de::Visitor;
+use serde::{Deserialize, Deserializer, Serialize};
 
 use crate::rates::Response;
+
+/// Which cells get a figure of their own. Contact sheets and the other figures of the set show all cells.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum CellFigures {
+    /// Every cell with steps.
+    #[default]
+    All,
+    /// Cells with a flag of severity caution or reject, or with a response without a usable fit.
+    Flagged,
+    /// No figure at all, not even of the set.
+    None,
+}
+
+/// By hand, so that `figures = true` is told what to write instead.
+impl<'de> Deserialize<'de> for CellFigures {
+    fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
+        struct Word;
+        impl Visitor<'_> for Word {
+            type Value = CellFigures;
+
+            fn expecting(&self, formatter: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+                formatter.write_str("\"all\", \"flagged\" or \"none\"")
+            }
+
+            fn visit_str<E: serde::de::Error>(self, word: &str) -> Result<CellFigures, E> {
+                match word {
+                    "all" => Ok(CellFigures::All),
+                    "flagged" => Ok(CellFigures::Flagged),
+                    "none" => Ok(CellFigures::None),
+                    other => Err(E::unknown_variant(other, &["all", "flagged", "none"])),
+                }
+            }
+        }
+        deserializer.deserialize_str(Word)
+    }
+}
 
 /// The analysis settings of one run.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -17,8 +55,10 @@ pub struct Analysis {
     pub lvr_refractory_s: f64,
     /// Whether profile intervals are computed; without them intervals are null and `open` rests on the ramp fit.
     pub profiles: bool,
-    /// Whether figures are drawn.
-    pub figures: bool,
+    /// Which cells get a figure of their own; with `none` no figure is drawn at all.
+    pub figures: CellFigures,
+    /// Whether the figure of a cell also shows the other rate functions fitted to it.
+    pub draw_rivals: bool,
     /// Steps with a rate from intervals below which a response is `silent`.
     pub min_interval_steps: usize,
     /// Upper over lower bound of max rate above which a closed ceiling is `loose`.
@@ -55,7 +95,8 @@ impl Default for Analysis {
             steady_fraction: 0.5,
             lvr_refractory_s: 0.005,
             profiles: true,
-            figures: true,
+            figures: CellFigures::All,
+            draw_rivals: false,
             min_interval_steps: 3,
             loose_ratio: 1.5,
             declining_fraction: 0.85,

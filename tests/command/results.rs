@@ -24,16 +24,25 @@ fn same_bytes_for_one_thread_and_two() {
                 "--threads",
                 threads,
                 "--quiet",
-                "--no-figures",
             ];
             halfrise(&arguments).succeeds();
             let mut all = tables(&out);
+            let mut drawn: Vec<_> = std::fs::read_dir(out.join("figures"))
+                .unwrap()
+                .map(|e| e.unwrap().path())
+                .collect();
+            drawn.sort();
+            assert!(drawn.len() > 20, "{drawn:?}");
+            for path in drawn {
+                let name = path.file_name().unwrap().to_string_lossy().into_owned();
+                all.push((name, std::fs::read(&path).unwrap()));
+            }
             for text_file in ["summary.md", "run.json"] {
                 all.push((text_file.into(), std::fs::read(out.join(text_file)).unwrap()));
             }
             runs.push(all);
         }
-        assert_eq!(runs[0].len(), 8);
+        assert_eq!(runs[0].len(), runs[1].len());
         for (one, two) in runs[0].iter().zip(&runs[1]) {
             assert!(one == two, "{set}: {} differs", one.0);
         }
@@ -206,7 +215,8 @@ fn awkward_cell_ids_stay_harmless() {
         }
         figures += 1;
     }
-    assert_eq!(figures, ids.len() + 1);
+    // One for each cell, and of the set: overview, contact sheet, distributions of the parameters.
+    assert_eq!(figures, ids.len() + 3);
     let summary = std::fs::read_to_string(out.join("summary.md")).unwrap();
     let mut columns = None;
     for line in summary.lines() {
@@ -290,4 +300,69 @@ fn a_recording_set_inside_an_earlier_result_folder_survives_overwriting() {
     said.fails(2, &["myset", "--out"]);
     assert!(inside.join("spikes.csv").exists() && inside.join("protocol.csv").exists());
     assert!(made.out().join("parameters.parquet").exists());
+}
+
+/// Names in `figures/` of the results, sorted; nothing where there is no such folder.
+fn figures(made: &Made) -> Vec<String> {
+    let mut names: Vec<String> = std::fs::read_dir(made.out().join("figures"))
+        .map(|entries| {
+            entries
+                .map(|e| e.unwrap().file_name().to_string_lossy().into_owned())
+                .collect()
+        })
+        .unwrap_or_default();
+    names.sort();
+    names
+}
+
+#[test]
+fn figures_are_drawn_for_the_cells_asked_for() {
+    // One cell loses the steps that a curve needs.
+    let made = Made::with_cells(&["a", "b", "short"]);
+    let protocol: Vec<String> = made
+        .read("protocol.csv")
+        .lines()
+        .enumerate()
+        .filter(|(i, line)| !line.starts_with("\"short\"") || i % 5 == 0)
+        .map(|(_, line)| line.to_owned())
+        .collect();
+    made.write("protocol.csv", protocol.join("\n"));
+    let fit = |more: &[&str]| {
+        let (set, out) = (made.set(), made.out());
+        let mut arguments = vec!["fit", text(&set), "--out", text(&out), "--quiet", "--overwrite"];
+        arguments.extend(more);
+        halfrise(&arguments)
+    };
+    let of_the_set = ["overview.svg", "population.svg", "sheet-01.svg", "worst.svg"];
+    let with = |cells: &[&str]| {
+        let mut names: Vec<String> = of_the_set.iter().chain(cells).map(|s| (*s).to_owned()).collect();
+        names.sort();
+        names
+    };
+    fit(&["--responses", "whole"]).succeeds();
+    assert_eq!(figures(&made), with(&["a.svg", "b.svg", "short.svg"]));
+    fit(&["--responses", "whole", "--figures", "flagged"]).succeeds();
+    assert_eq!(figures(&made), with(&["short.svg"]));
+    let run = std::fs::read_to_string(made.out().join("run.json")).unwrap();
+    let run: serde_json::Value = serde_json::from_str(&run).unwrap();
+    assert!(run.to_string().contains("\"figures\":\"flagged\""), "{run}");
+    for none in [&["--figures", "none"][..], &["--no-figures"]] {
+        fit(none).succeeds();
+        assert!(figures(&made).is_empty());
+    }
+    fit(&["--figures", "some"]).fails(2, &["some", "flagged"]);
+    fit(&["--figures", "all", "--no-figures"]).fails(2, &["--no-figures"]);
+    // The same as a key of the set; what is typed comes first.
+    made.write(
+        "recording.toml",
+        "[analysis]\nfigures = \"flagged\"\nresponses = [\"whole\"]\n",
+    );
+    fit(&[]).succeeds();
+    assert_eq!(figures(&made), with(&["short.svg"]));
+    fit(&["--figures", "all"]).succeeds();
+    assert_eq!(figures(&made), with(&["a.svg", "b.svg", "short.svg"]));
+    for wrong in ["\"some\"", "true", "3"] {
+        made.write("recording.toml", format!("[analysis]\nfigures = {wrong}\n"));
+        fit(&[]).fails(2, &["recording.toml", "line 2", "all", "flagged", "none"]);
+    }
 }

@@ -156,6 +156,15 @@ pub struct CurvePoint {
     pub hi_hz: Option<f64>,
 }
 
+/// One of the other rate functions fitted to a response.
+#[derive(Clone, Debug, PartialEq)]
+pub struct RivalCurve {
+    /// Name of the rate function, as in [`Goodness::curve`].
+    pub curve: &'static str,
+    /// Its fitted rates, Hz, at the drives of [`ResponseResult::curve`].
+    pub rates_hz: Vec<f64>,
+}
+
 /// Everything found about one response of one cell.
 #[derive(Clone, Debug, PartialEq)]
 pub struct ResponseResult {
@@ -205,6 +214,8 @@ pub struct ResponseResult {
     pub goodness: Vec<Goodness>,
     /// Fitted rate and band on a grid of drives; empty without a fit.
     pub curve: Vec<CurvePoint>,
+    /// The other rate functions on the same grid; empty where none was fitted or none is to be drawn.
+    pub rivals: Vec<RivalCurve>,
     /// One entry per step of the cell, in the order of [`CellResult::steps`].
     pub rates: Vec<StepRate>,
 }

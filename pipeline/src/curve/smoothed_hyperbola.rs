@@ -251,7 +251,7 @@ enum Nodes {
 }
 
 /// The least number of nodes that keeps 1e-11, found by trying them all against [`evaluate`]: below the threshold,
-/// and above it for z/s up to 2, up to 4 and beyond. The wider the noise, the more the pole at u = -1 costs.
+/// and above it for z/s up to 2, 4 and 7.5. The wider the noise, the more the pole at u = -1 costs.
 fn nodes(s: f64) -> (Nodes, [Nodes; 3]) {
     use Nodes::{Of24, Of32, Of40, Of48, Of80};
     let below = if s <= 1.5 {
@@ -331,8 +331,10 @@ impl Kernel {
                     self.above[0]
                 } else if w <= 4.0 {
                     self.above[1]
-                } else {
+                } else if w <= 7.5 {
                     self.above[2]
+                } else {
+                    Nodes::Of80
                 };
                 (above, z + if self.rough { 4.5 } else { 7.6 } * s)
             };

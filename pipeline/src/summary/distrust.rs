@@ -1,16 +1,18 @@
 //! The cells to look at before anything else, worst first.
 
+use super::figure::{WORST, WorstCell};
 use super::text::{id_markdown, sentence_markdown};
 use crate::assess::{Ceiling, CellResult, Flag, Severity, Status};
 
-/// Most cells listed.
-pub(super) const LISTED: usize = 25;
+/// Most cells listed, those in the figure not counted.
+const LISTED: usize = 25;
 /// Most reasons given for one cell.
 const REASONS: usize = 5;
 
 /// How bad a cell is; smaller is worse. The last field is the cell's place, so that the order is total.
 type Rank = (u8, std::cmp::Reverse<usize>, std::cmp::Reverse<usize>, u64);
 
+#[derive(Clone)]
 struct Listed {
     rank: Rank,
     cell: String,
@@ -19,10 +21,28 @@ struct Listed {
     figure: Option<String>,
 }
 
+struct Drawn {
+    row: Listed,
+    cell: WorstCell,
+}
+
+/// A row of the table, as Markdown.
+pub(super) struct DistrustRow<'a> {
+    /// Number in the figure of the worst, from 1.
+    pub in_figure: Option<usize>,
+    pub cell: &'a str,
+    pub group: &'a str,
+    pub reasons: &'a str,
+    /// File of the cell's own figure.
+    pub figure: Option<&'a str>,
+}
+
 /// Keeps the worst cells of a stream.
 #[derive(Default)]
 pub(super) struct Distrust {
     listed: Vec<Listed>,
+    /// The worst of those that have something to draw.
+    drawn: Vec<Drawn>,
     /// Cells with a reason to be listed, shown or not.
     suspects: u64,
 }
@@ -62,8 +82,8 @@ fn tier(cell: &CellResult, rejects: usize, cautions: usize) -> Option<u8> {
 }
 
 impl Distrust {
-    /// Looks at the next cell; `place` is its number in the stream.
-    pub(super) fn add(&mut self, cell: &CellResult, figure: Option<&str>, place: u64) {
+    /// Looks at the next cell; `place` is its number in the stream, `draw` whether its figure may be wanted.
+    pub(super) fn add(&mut self, cell: &CellResult, figure: Option<&str>, place: u64, draw: bool) {
         let flags = |severity| {
             cell.responses
                 .iter()
@@ -82,21 +102,30 @@ impl Distrust {
             std::cmp::Reverse(cautions),
             place,
         );
-        let at = self.listed.partition_point(|listed| listed.rank < rank);
-        if at >= LISTED {
+        let listed_at = self.listed.partition_point(|listed| listed.rank < rank);
+        let drawn_at = self.drawn.partition_point(|drawn| drawn.row.rank < rank);
+        if listed_at >= LISTED && drawn_at >= WORST {
             return;
         }
-        self.listed.truncate(LISTED - 1);
-        self.listed.insert(
-            at,
-            Listed {
-                rank,
-                cell: id_markdown(&cell.id.0),
-                group: cell.group.as_deref().map(id_markdown).unwrap_or_default(),
-                reasons: reasons(cell),
-                figure: figure.map(str::to_string),
-            },
-        );
+        let row = Listed {
+            rank,
+            cell: id_markdown(&cell.id.0),
+            group: cell.group.as_deref().map(id_markdown).unwrap_or_default(),
+            reasons: reasons(cell),
+            figure: figure.map(str::to_string),
+        };
+        if draw
+            && drawn_at < WORST
+            && let Some(cell) = WorstCell::new(cell)
+        {
+            self.drawn.truncate(WORST - 1);
+            let row = row.clone();
+            self.drawn.insert(drawn_at, Drawn { row, cell });
+        }
+        if listed_at < LISTED {
+            self.listed.truncate(LISTED - 1);
+            self.listed.insert(listed_at, row);
+        }
     }
 
     /// Number of cells with a reason for distrust.
@@ -104,16 +133,31 @@ impl Distrust {
         self.suspects
     }
 
-    /// Cell, group, reasons, figure file; worst first.
-    pub(super) fn rows(&self) -> impl Iterator<Item = (&str, &str, &str, Option<&str>)> {
-        self.listed.iter().map(|l| {
-            (
-                l.cell.as_str(),
-                l.group.as_str(),
-                l.reasons.as_str(),
-                l.figure.as_deref(),
-            )
-        })
+    /// The worst cells that have something to draw, worst first.
+    pub(super) fn drawn(&self) -> Vec<&WorstCell> {
+        self.drawn.iter().map(|drawn| &drawn.cell).collect()
+    }
+
+    /// The worst cells and those drawn, worst first, each with its number in the figure.
+    pub(super) fn rows(&self) -> Vec<DistrustRow<'_>> {
+        let number = |row: &Listed| self.drawn.iter().position(|drawn| drawn.row.rank == row.rank);
+        // A drawn cell that is not among the listed ranks behind all of them.
+        let further = self
+            .drawn
+            .iter()
+            .map(|drawn| &drawn.row)
+            .filter(|row| self.listed.iter().all(|listed| listed.rank != row.rank));
+        self.listed
+            .iter()
+            .chain(further)
+            .map(|row| DistrustRow {
+                in_figure: number(row).map(|place| place + 1),
+                cell: &row.cell,
+                group: &row.group,
+                reasons: &row.reasons,
+                figure: row.figure.as_deref(),
+            })
+            .collect()
     }
 }
 

@@ -85,10 +85,13 @@ pub(super) const REFERENCES: &str = "\
 - Bates DM, Watts DG (1988). *Nonlinear Regression Analysis and Its Applications*. Wiley, New York. Chapter 6.
 - Holt GR, Softky WR, Koch C, Douglas RJ (1996). Comparison of discharge variability in vitro and in vivo in cat visual cortex neurons. *Journal of Neurophysiology* 75, 1806-1814.
 - Hurvich CM, Tsai CL (1989). Regression and time series model selection in small samples. *Biometrika* 76, 297-307.
+- Hyndman RJ, Fan Y (1996). Sample quantiles in statistical packages. *The American Statistician* 50, 361-365.
 - Michaelis L, Menten ML (1913). Die Kinetik der Invertinwirkung. *Biochemische Zeitschrift* 49, 333-369.
 - Naka KI, Rushton WAH (1966). S-potentials from luminosity units in the retina of fish (Cyprinidae). *Journal of Physiology* 185, 587-599.
+- Okabe M, Ito K (2008). Color universal design: how to make figures and presentations that are friendly to colorblind people. The colours of the figures.
 - Paule RC, Mandel J (1982). Consensus values and weighting factors. *Journal of Research of the National Bureau of Standards* 87, 377-385.
 - Shinomoto S, Shima K, Tanji J (2003). Differences in spiking patterns among cortical neurons. *Neural Computation* 15, 2823-2842.
 - Shinomoto S, Kim H, Shimokawa T, et al. (2009). Relating neuronal firing patterns to functional differentiation of cerebral cortex. *PLoS Computational Biology* 5, e1000433.
+- Tukey JW (1977). *Exploratory Data Analysis*. Addison-Wesley, Reading. Chapter 2. The far-out values of the distributions.
 - Venzon DJ, Moolgavkar SH (1988). A method for computing profile-likelihood-based confidence intervals. *Applied Statistics* 37, 87-94.
 ";

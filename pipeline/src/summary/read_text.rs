@@ -8,6 +8,8 @@ use crate::recording::{RecordingSet, RefusedRow, RowCounts, TableKind};
 
 /// Most input files listed.
 const FILES_LISTED: usize = 30;
+/// Reasons named in the opening.
+const REASONS_NAMED: usize = 4;
 /// Most notes of the reader listed.
 const NOTES_LISTED: usize = 50;
 
@@ -63,41 +65,11 @@ pub(super) fn set_line(set: &RecordingSet) -> String {
     )
 }
 
-/// Files, rows and the sum that shows that no row is lost.
-pub(super) fn what_was_read(set: &RecordingSet) -> String {
-    let mut text = String::from("## What was read\n\n");
-    text.push_str(&table_head(&[
-        ("file", false),
-        ("table", false),
-        ("rows", true),
-        ("SHA-256 (first 12)", false),
-    ]));
-    for input in set.inputs.iter().take(FILES_LISTED) {
-        let hash: String = input.sha256.chars().take(12).collect();
-        let rows = if input.table.is_some() {
-            count_text(input.rows)
-        } else {
-            String::new()
-        };
-        text.push_str(&table_row(&[
-            id_markdown(&input.path),
-            input.table.map_or("settings", TableKind::name).to_string(),
-            rows,
-            id_markdown(&hash),
-        ]));
-    }
-    if let Some(more) = set
-        .inputs
-        .len()
-        .checked_sub(FILES_LISTED)
-        .filter(|more| *more > 0)
-    {
-        text.push_str(&format!(
-            "\n{} more files are listed in run.json.\n",
-            count_text(more as u64)
-        ));
-    }
-    text.push_str("\nNo row is lost: in each table, rows read = used + outside steps + refused.\n\n");
+/// How many rows were read, used and refused, the sum that shows that no row is lost, and the reasons in one sentence.
+pub(super) fn what_was_read_and_refused(set: &RecordingSet) -> String {
+    let mut text = String::from(
+        "## What was read and refused\n\nNo row is lost: in each table, rows read = used + outside steps + refused.\n\n",
+    );
     text.push_str(&table_head(&[
         ("table", false),
         ("rows read", true),
@@ -135,6 +107,88 @@ pub(super) fn what_was_read(set: &RecordingSet) -> String {
             ]));
         }
     }
+    text.push('\n');
+    let cells = set.cells.iter().filter(|cell| cell.refusal.is_some()).count();
+    if set.refused.is_empty() && cells == 0 {
+        text.push_str("Nothing was refused: every row and every cell was accepted.\n\n");
+        return text;
+    }
+    let mut reasons: BTreeMap<(TableKind, &str), u64> = BTreeMap::new();
+    for row in &set.refused {
+        *reasons.entry((row.table, row.reason)).or_default() += 1;
+    }
+    let mut by_number: Vec<((TableKind, &str), u64)> = reasons.into_iter().collect();
+    by_number.sort_by_key(|(_, rows)| std::cmp::Reverse(*rows));
+    let more = by_number.len().saturating_sub(REASONS_NAMED);
+    let mut named: Vec<String> = by_number
+        .iter()
+        .take(REASONS_NAMED)
+        .map(|((table, reason), rows)| {
+            format!(
+                "{} {} in {}",
+                count_text(*rows),
+                id_markdown(reason),
+                table.name()
+            )
+        })
+        .collect();
+    match more {
+        0 => {}
+        1 => named.push("1 more reason".into()),
+        more => named.push(format!("{} more reasons", count_text(more as u64))),
+    }
+    let list = if named.is_empty() {
+        String::new()
+    } else {
+        format!(" ({})", named.join(", "))
+    };
+    let whole = match cells {
+        0 => String::new(),
+        1 => " and 1 whole cell".into(),
+        n => format!(" and {} whole cells", count_text(n as u64)),
+    };
+    text.push_str(&format!(
+        "Refused: {} rows{list}{whole}. Each reason with an example stands under [What was refused and \
+         why](#what-was-refused-and-why), each row in refused.parquet.\n\n",
+        count_text(set.refused.len() as u64)
+    ));
+    text
+}
+
+/// The files with what was settled while reading them.
+pub(super) fn input_section(set: &RecordingSet) -> String {
+    let mut text = String::from("## Input files\n\n");
+    text.push_str(&table_head(&[
+        ("file", false),
+        ("table", false),
+        ("rows", true),
+        ("SHA-256 (first 12)", false),
+    ]));
+    for input in set.inputs.iter().take(FILES_LISTED) {
+        let hash: String = input.sha256.chars().take(12).collect();
+        let rows = if input.table.is_some() {
+            count_text(input.rows)
+        } else {
+            String::new()
+        };
+        text.push_str(&table_row(&[
+            id_markdown(&input.path),
+            input.table.map_or("settings", TableKind::name).to_string(),
+            rows,
+            id_markdown(&hash),
+        ]));
+    }
+    if let Some(more) = set
+        .inputs
+        .len()
+        .checked_sub(FILES_LISTED)
+        .filter(|more| *more > 0)
+    {
+        text.push_str(&format!(
+            "\n{} more files are listed in run.json.\n",
+            count_text(more as u64)
+        ));
+    }
     if !set.notes.is_empty() {
         text.push_str("\nNoticed and settled while reading:\n\n");
         for note in set.notes.iter().take(NOTES_LISTED) {
@@ -149,11 +203,11 @@ pub(super) fn what_was_read(set: &RecordingSet) -> String {
 }
 
 /// What was refused, by reason, with the first example of each.
-pub(super) fn what_was_refused(set: &RecordingSet) -> String {
-    let mut text = String::from("## What was refused\n\n");
+pub(super) fn refused_section(set: &RecordingSet) -> String {
+    let mut text = String::from("## What was refused and why\n\n");
     let cells = set.cells.iter().filter(|cell| cell.refusal.is_some()).count();
     if set.refused.is_empty() && cells == 0 {
-        text.push_str("Nothing: every row and every cell was accepted.\n\n");
+        text.push_str("Nothing.\n\n");
         return text;
     }
     let mut reasons: BTreeMap<(TableKind, &str), (u64, &RefusedRow)> = BTreeMap::new();

@@ -4,12 +4,15 @@ use std::path::PathBuf;
 use std::sync::Arc;
 
 use crate::assess::{Ceiling, CellResult, CurvePoint, Estimate, Flag, ResponseResult, Severity, Status};
-use crate::rates::{RateFrom, Response, StepRate};
+use crate::rates::{RateFrom, Response, StepRate, fit_se};
 use crate::recording::{
     CellConstants, CellId, CellRecording, DriveKind, InputFile, ProtocolStep, RecordingSet, RefusedRow,
     RowCounts, TableKind,
 };
 use crate::settings::Analysis;
+
+/// Scatter between the steps of the cells, Hz.
+const EXTRA_SD: f64 = 1.1;
 
 pub(super) fn estimate(value: f64, below: f64, above: f64) -> Estimate {
     Estimate {
@@ -71,14 +74,17 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
         .enumerate()
         .map(|(i, &drive)| {
             let wobble = 1.0 + 0.06 * ((i as f64 * 12.9898).sin());
-            let mut hz = rate(drive) * wobble;
+            let fitted = rate(drive);
+            let mut hz = fitted * wobble;
             if falls(drive) {
                 hz *= 0.35;
             }
             if silent || hz < 1.5 {
                 hz = 0.0;
             }
-            StepRate {
+            let used = !falls(drive) && !silent;
+            let se = if hz > 0.0 { 0.9 + 0.05 * hz } else { 0.36 };
+            let made = StepRate {
                 step: i,
                 response,
                 window_start_s: i as f64,
@@ -86,7 +92,7 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
                 spikes: (hz * 0.8) as usize,
                 intervals: (hz * 0.8) as usize,
                 rate_hz: hz,
-                rate_se_hz: if hz > 0.0 { 0.9 + 0.05 * hz } else { 0.36 },
+                rate_se_hz: se,
                 rate_from: if hz > 0.0 {
                     RateFrom::Intervals
                 } else {
@@ -99,10 +105,14 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
                 lv: None,
                 lvr: None,
                 adaptation_ratio: None,
-                used: !falls(drive),
-                fitted_hz: None,
-                residual_hz: None,
+                used,
+                fitted_hz: used.then_some(fitted),
+                residual_hz: used.then_some(hz - fitted),
                 weight: None,
+            };
+            StepRate {
+                weight: used.then(|| 1.0 / (fit_se(&made).powi(2) + EXTRA_SD * EXTRA_SD)),
+                ..made
             }
         })
         .collect();
@@ -120,7 +130,6 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
                     hi_hz: Some(hz * 1.06 + 0.3),
                 }
             })
-            .filter(|point| !falls(point.drive))
             .collect()
     };
     let (max_rate, half_rise) = match verdict {
@@ -153,7 +162,7 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
         levels: drives.len() / 2,
         spikes: 100,
         drive_min: drives.first().copied(),
-        drive_max: drives.last().copied(),
+        drive_max: drives.iter().copied().rfind(|drive| !falls(*drive)),
         peak_rate_hz: Some(90.0),
         max_rate,
         half_rise,
@@ -161,7 +170,7 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
         noise_sd: fitted(estimate(21.4, 4.4, 5.2)),
         initial_gain: fitted(estimate(max / half, 0.08, 0.11)),
         reached: (!open && !silent).then_some(0.78),
-        extra_sd_hz: Some(1.1),
+        extra_sd_hz: Some(EXTRA_SD),
         interval_cv: Some(0.2),
         ceiling: Some(verdict),
         usable: matches!(verdict, Ceiling::Resolved | Ceiling::Loose),
@@ -169,6 +178,7 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
         covariance: None,
         goodness: Vec::new(),
         curve,
+        rivals: Vec::new(),
         rates,
     }
 }

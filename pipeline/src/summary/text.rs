@@ -29,6 +29,15 @@ pub(super) fn visible(text: &str, longest: usize) -> String {
     shown
 }
 
+/// A cell id as a figure shows it; one of blanks alone is said to be blank.
+pub(super) fn id_visible(text: &str) -> String {
+    if text.trim().is_empty() {
+        "(blank)".into()
+    } else {
+        visible(text, ID_LENGTH)
+    }
+}
+
 /// Visible text as one piece of inline Markdown that also stands within a table cell.
 fn markdown(visible: &str) -> String {
     let characters: Vec<char> = visible.chars().collect();

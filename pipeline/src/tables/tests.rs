@@ -129,6 +129,7 @@ fn fitted(response: Response) -> ResponseResult {
                 hi_hz: Some(f64::NAN),
             },
         ],
+        rivals: vec![],
         rates: vec![rate(0, response), rate(1, response)],
     }
 }

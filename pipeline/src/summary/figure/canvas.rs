@@ -110,6 +110,26 @@ pub(super) fn fit_text(text: &str, font: &Font, width: f64) -> String {
     cut
 }
 
+/// The text, cut in its middle where it would be wider than `width`: names often differ at their ends alone.
+pub(super) fn fit_name(text: &str, font: &Font, width: f64) -> String {
+    if text_width(text, font) <= width {
+        return text.to_string();
+    }
+    let characters: Vec<char> = text.chars().collect();
+    let cut = |kept: usize| -> String {
+        let (head, tail) = (kept - kept / 2, kept / 2);
+        let mut name: String = characters.iter().take(head).collect();
+        name.push('…');
+        name.extend(characters.iter().skip(characters.len().saturating_sub(tail)));
+        name
+    };
+    (0..characters.len())
+        .rev()
+        .map(cut)
+        .find(|name| text_width(name, font) <= width)
+        .unwrap_or_else(|| "…".into())
+}
+
 /// The text broken at blanks into at most `lines` lines of `width`; the last is cut with an ellipsis.
 pub(super) fn wrap_text(text: &str, font: &Font, width: f64, lines: usize) -> Vec<String> {
     let mut wrapped: Vec<String> = Vec::new();
@@ -218,20 +238,77 @@ impl Canvas {
         );
     }
 
+    /// Open circles in one element, so that hundreds of them stay light.
+    pub(super) fn circles(&mut self, centres: &[(f64, f64)], radius: f64, stroke: Stroke) {
+        if centres.is_empty() {
+            return;
+        }
+        let (r, across) = (number(radius), number(2.0 * radius));
+        let mut data = String::with_capacity(centres.len() * 48);
+        for (x, y) in centres {
+            data.push_str(&format!(
+                "M{} {}a{r} {r} 0 1 0 {across} 0a{r} {r} 0 1 0 -{across} 0",
+                number(x - radius),
+                number(*y)
+            ));
+        }
+        self.append(
+            Path::new()
+                .set("d", data)
+                .set("fill", "none")
+                .set("stroke", stroke.colour)
+                .set("stroke-width", number(stroke.width)),
+        );
+    }
+
+    /// A filled circle.
+    pub(super) fn disc(&mut self, centre: (f64, f64), radius: f64, colour: &'static str) {
+        self.append(
+            Circle::new()
+                .set("cx", number(centre.0))
+                .set("cy", number(centre.1))
+                .set("r", number(radius))
+                .set("fill", colour),
+        );
+    }
+
+    /// An open diamond.
+    pub(super) fn diamond(&mut self, (x, y): (f64, f64), radius: f64, stroke: Stroke) {
+        let corners = [
+            (x, y - radius),
+            (x + radius, y),
+            (x, y + radius),
+            (x - radius, y),
+            (x, y - radius),
+            (x + radius, y),
+        ];
+        self.path(&corners, stroke);
+    }
+
     /// A diagonal cross.
     pub(super) fn cross(&mut self, centre: (f64, f64), radius: f64, stroke: Stroke) {
-        let (x, y) = centre;
-        let data = format!(
-            "M{} {}L{} {}M{} {}L{} {}",
-            number(x - radius),
-            number(y - radius),
-            number(x + radius),
-            number(y + radius),
-            number(x - radius),
-            number(y + radius),
-            number(x + radius),
-            number(y - radius)
-        );
+        self.crosses(&[centre], radius, stroke);
+    }
+
+    /// Diagonal crosses in one element.
+    pub(super) fn crosses(&mut self, centres: &[(f64, f64)], radius: f64, stroke: Stroke) {
+        if centres.is_empty() {
+            return;
+        }
+        let mut data = String::with_capacity(centres.len() * 48);
+        for (x, y) in centres {
+            data.push_str(&format!(
+                "M{} {}L{} {}M{} {}L{} {}",
+                number(x - radius),
+                number(y - radius),
+                number(x + radius),
+                number(y + radius),
+                number(x - radius),
+                number(y + radius),
+                number(x + radius),
+                number(y - radius)
+            ));
+        }
         self.append(
             Path::new()
                 .set("d", data)
@@ -299,6 +376,19 @@ mod tests {
         assert_eq!(number(-12.5), "-12.5");
         assert_eq!(number(100.0), "100");
         assert_eq!(number(f64::NAN), "0");
+    }
+
+    #[test]
+    fn names_are_cut_in_their_middle() {
+        let small = font(10.0);
+        let names = ["rig A, slice 12, neuron 7", "rig A, slice 12, neuron 8"];
+        let cut = names.map(|name| fit_name(name, &small, 70.0));
+        assert_ne!(cut[0], cut[1]);
+        for name in &cut {
+            assert!(text_width(name, &small) <= 70.0 && name.starts_with("rig") && name.contains('…'));
+        }
+        assert_eq!(fit_name("A-01", &small, 70.0), "A-01");
+        assert_eq!(fit_name("A-01", &small, 1.0), "…");
     }
 
     #[test]

@@ -10,6 +10,18 @@ const EXTENSION: &str = ".svg";
 
 /// File name of the overview figure within `figures/`.
 pub const OVERVIEW_FILE: &str = "overview.svg";
+/// File name of the figure of the cells to distrust first.
+pub const WORST_FILE: &str = "worst.svg";
+/// File name of the figure of the parameters' distributions.
+pub const POPULATION_FILE: &str = "population.svg";
+
+/// Whether a name is kept for a page of the contact sheets.
+fn is_sheet(name: &str) -> bool {
+    name.to_ascii_lowercase()
+        .strip_prefix("sheet-")
+        .and_then(|rest| rest.strip_suffix(EXTENSION))
+        .is_some_and(|page| page.bytes().all(|b| b.is_ascii_digit()))
+}
 
 /// Names that stand for devices on Windows, whatever the extension.
 fn is_device(stem: &str) -> bool {
@@ -103,12 +115,14 @@ impl Default for FigureNames {
 }
 
 impl FigureNames {
-    /// No name taken but that of the overview.
+    /// No name taken but those of the figures of the set.
     pub fn new() -> Self {
         let mut names = Self {
             taken: HashSet::new(),
         };
-        names.take(OVERVIEW_FILE);
+        for name in [OVERVIEW_FILE, WORST_FILE, POPULATION_FILE] {
+            names.take(name);
+        }
         names
     }
 
@@ -125,7 +139,7 @@ impl FigureNames {
     /// A name for the figure of the cell called `id`. The names depend on the order in which the cells come.
     pub fn name(&mut self, id: &str) -> String {
         let plain = figure_file_name(id);
-        if self.take(&plain) {
+        if !is_sheet(&plain) && self.take(&plain) {
             return plain;
         }
         let (stem, _) = safe_stem(id);
@@ -205,14 +219,33 @@ mod tests {
     fn names_are_unique_without_regard_to_case() {
         let mut names = FigureNames::new();
         let ids = [
-            "a", "A", "a", "a", "a", "a", "a", "a_b", "a b", "a/b", "overview", "Overview", "CON", "con",
+            "a",
+            "A",
+            "a",
+            "a",
+            "a",
+            "a",
+            "a",
+            "a_b",
+            "a b",
+            "a/b",
+            "overview",
+            "Overview",
+            "CON",
+            "con",
+            "worst",
+            "Population",
+            "sheet-01",
+            "Sheet-123",
         ];
         let mut seen = HashSet::new();
         for id in ids {
             let name = names.name(id);
             assert!(is_safe(&name), "{id:?} -> {name}");
             assert!(seen.insert(name.to_ascii_lowercase()), "{id:?} -> {name} again");
-            assert_ne!(name.to_ascii_lowercase(), OVERVIEW_FILE);
+            let lower = name.to_ascii_lowercase();
+            assert!(![OVERVIEW_FILE, WORST_FILE, POPULATION_FILE].contains(&lower.as_str()));
+            assert!(!is_sheet(&lower), "{name}");
         }
         assert_eq!(FigureNames::new().name("a"), "a.svg");
     }

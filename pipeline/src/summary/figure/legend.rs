@@ -1,7 +1,7 @@
 //! What the marks mean, in a row that wraps.
 
 use super::canvas::{BAND, CURVE, Canvas, INK, PALE, POINT, Stroke, font, solid, text_width};
-use super::panel::verdict_dashes;
+use super::panel::{BEYOND, triangle, verdict_dashes};
 use crate::assess::Ceiling;
 
 /// One entry.
@@ -11,8 +11,16 @@ pub(super) enum Mark {
     Used,
     /// A step that was not.
     Unused,
+    /// A step used with less than half its weight.
+    Downweighted,
+    /// What the fit leaves of a step.
+    Residual,
+    /// A residual that the panel is too low for.
+    OffScale,
     /// The fitted curve with its band.
     Curve,
+    /// The curve beyond the steps used.
+    Beyond,
     /// The band alone.
     Band,
     /// The threshold with its interval.
@@ -28,7 +36,11 @@ impl Mark {
         match self {
             Self::Used => "rate of a step ± 1 SE",
             Self::Unused => "step not used by the fit",
+            Self::Downweighted => "step with less than half its weight",
+            Self::Residual => "residual ± 1 SD as the fit weighs it",
+            Self::OffScale => "residual beyond the axis",
             Self::Curve => "fitted rate function, 95 % band",
+            Self::Beyond => "the same beyond the steps used",
             Self::Band => "95 % band",
             Self::Threshold => "threshold, 95 % interval",
             Self::Ceiling => "ceiling, 95 % interval",
@@ -76,12 +88,15 @@ pub(super) fn draw_legend(canvas: &mut Canvas, marks: &[Mark], at: (f64, f64), w
         let middle = x + 0.5 * SYMBOL;
         let end = x + SYMBOL;
         match mark {
-            Mark::Used => {
+            Mark::Used | Mark::Residual => {
                 canvas.line((middle, y - 8.0), (middle, y - 3.2), solid(POINT, 0.8));
                 canvas.line((middle, y + 3.2), (middle, y + 8.0), solid(POINT, 0.8));
                 canvas.circle((middle, y), 3.2, solid(POINT, 1.1));
             }
             Mark::Unused => canvas.cross((middle, y), 2.6, solid(POINT, 0.9)),
+            Mark::Downweighted => canvas.diamond((middle, y), 4.0, solid(POINT, 1.1)),
+            Mark::OffScale => triangle(canvas, (middle, y + 3.0), (0.0, 1.0), 5.5),
+            Mark::Beyond => canvas.line((x, y), (end, y), BEYOND),
             Mark::Curve => {
                 canvas.area(
                     &[(x, y - 5.0), (end, y - 5.0), (end, y + 5.0), (x, y + 5.0)],

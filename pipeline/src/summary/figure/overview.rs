@@ -1,12 +1,12 @@
 //! The figure of a set: one small panel a cell.
 
-use super::canvas::{Anchor, Canvas, Font, PALE, fit_text, font};
+use super::canvas::{Anchor, Canvas, Font, PALE, fit_name, fit_text, font, wrap_text};
 use super::legend::{Mark, draw_legend, legend_height};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel};
 use crate::assess::{Ceiling, CellResult};
 use crate::recording::RecordingSet;
 use crate::summary::numbers::count_text;
-use crate::summary::text::{ID_LENGTH, visible};
+use crate::summary::text::{ID_LENGTH, id_visible, visible};
 
 /// Most cells drawn.
 const MOST_CELLS: u64 = 60;
@@ -14,16 +14,18 @@ const COLUMNS: usize = 6;
 const LEFT: f64 = 32.0;
 const WIDTH: f64 = 128.0;
 const RIGHT: f64 = 18.0;
+/// Room for the name and a verdict of one line, and of two.
 const HEAD: f64 = 30.0;
+const TALL_HEAD: f64 = 41.0;
 const HEIGHT: f64 = 88.0;
-const FOOT: f64 = 20.0;
+const FOOT: f64 = 22.0;
 const EDGE: f64 = 10.0;
 /// Room left of the first column for the name of the rate axis.
 const AXIS: f64 = 16.0;
 const TITLE: f64 = 54.0;
 
 const STYLE: PanelStyle = PanelStyle {
-    label: 8.0,
+    label: 9.0,
     radius: 1.7,
     line: 1.5,
     x_ticks: 3,
@@ -31,6 +33,8 @@ const STYLE: PanelStyle = PanelStyle {
     headroom: 3.0,
     strip: 9.0,
     large: false,
+    drive_labels: true,
+    verdict_dashes: true,
 };
 
 struct Digest {
@@ -71,7 +75,7 @@ impl Overview {
         let chosen = all <= most || place == 0 || place * most / all != (place - 1) * most / all;
         if chosen && (self.drawn.len() as u64) < MOST_CELLS {
             self.drawn.push(Digest {
-                id: visible(&cell.id.0, ID_LENGTH),
+                id: id_visible(&cell.id.0),
                 panel: Panel::new(cell, first, 80, 50),
             });
         }
@@ -88,12 +92,25 @@ impl Overview {
         let columns = self.drawn.len().clamp(3, COLUMNS);
         let rows = self.drawn.len().div_ceil(columns);
         let cell_width = LEFT + WIDTH + RIGHT;
-        let cell_height = HEAD + HEIGHT + FOOT;
+        let small = Font {
+            colour: PALE,
+            ..font(9.0)
+        };
+        let room = WIDTH + 0.5 * RIGHT;
+        let tall = self
+            .drawn
+            .iter()
+            .any(|d| wrap_text(&d.panel.verdict(), &small, room, 2).len() > 1);
+        let head = if tall { TALL_HEAD } else { HEAD };
+        let cell_height = head + HEIGHT + FOOT;
         let width = 2.0 * EDGE + AXIS + cell_width * columns as f64;
         let inner = width - 2.0 * EDGE - AXIS;
         let mut marks = vec![Mark::Used];
         if self.drawn.iter().any(|d| d.panel.has_unused()) {
             marks.push(Mark::Unused);
+        }
+        if self.drawn.iter().any(|d| d.panel.has_downweighted()) {
+            marks.push(Mark::Downweighted);
         }
         for verdict in [
             Ceiling::Resolved,
@@ -149,26 +166,23 @@ impl Overview {
             let top = TITLE + cell_height * (i / columns) as f64;
             let frame = Frame {
                 left: start + LEFT,
-                top: top + HEAD,
+                top: top + head,
                 width: WIDTH,
                 height: HEIGHT,
             };
-            let room = WIDTH + 0.5 * RIGHT;
             let name = Font {
                 bold: true,
                 ..font(9.0)
             };
-            canvas.text((frame.left, top + 14.0), &fit_text(&digest.id, &name, room), name);
-            let small = Font {
-                colour: PALE,
-                ..font(8.5)
-            };
+            canvas.text((frame.left, top + 14.0), &fit_name(&digest.id, &name, room), name);
             let verdict = if mixed {
                 format!("{}, {}", digest.panel.verdict(), digest.panel.unit)
             } else {
-                digest.panel.verdict().into()
+                digest.panel.verdict()
             };
-            canvas.text((frame.left, top + 25.0), &fit_text(&verdict, &small, room), small);
+            for (line, text) in wrap_text(&verdict, &small, room, 2).iter().enumerate() {
+                canvas.text((frame.left, top + 25.0 + 10.5 * line as f64), text, small);
+            }
             draw_panel(&mut canvas, &digest.panel, frame, &STYLE);
         }
         let axis = Font {

@@ -4,16 +4,45 @@ use super::canvas::{
     Anchor, BAND, CURVE, Canvas, Font, INK, PALE, POINT, Stroke, fit_text, font, solid, text_width,
 };
 use super::scale::{Scale, ticks};
-use crate::assess::{Ceiling, CellResult, CurvePoint, Estimate, ResponseResult, Status};
-use crate::rates::Response;
+use crate::assess::{Ceiling, CellResult, CurvePoint, Estimate, ResponseResult, Severity, Status};
+use crate::rates::{Response, fit_se};
+
+/// What the fit made of a step.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub(super) enum Role {
+    /// Used with its full weight, or drawn without a fit.
+    Used,
+    /// Used with less than half of the weight that its standard error gives it.
+    Downweighted,
+    /// Not used.
+    LeftOut,
+}
+
+/// What the fitted curve leaves of a rate, Hz.
+#[derive(Clone, Copy, Debug)]
+pub(super) struct Residual {
+    pub hz: f64,
+    /// Standard deviation that the fit expects of it.
+    pub sd: f64,
+}
 
 /// A rate at a drive.
 #[derive(Clone, Copy, Debug)]
 pub(super) struct PlotPoint {
-    drive: f64,
-    rate: f64,
-    se: f64,
-    used: bool,
+    pub drive: f64,
+    pub rate: f64,
+    pub se: f64,
+    pub role: Role,
+    pub residual: Option<Residual>,
+}
+
+/// Another rate function fitted to the same points.
+#[derive(Clone, Debug)]
+pub(super) struct Rival {
+    pub curve: &'static str,
+    /// AICc weight, where it is known.
+    pub weight: Option<f64>,
+    pub points: Vec<(f64, f64)>,
 }
 
 /// What a panel shows, and no more: a light copy that outlives the cell.
@@ -23,17 +52,67 @@ pub(super) struct Panel {
     pub response: Response,
     pub status: Status,
     pub ceiling: Option<Ceiling>,
+    /// The flag that makes a fitted response unusable.
+    pub rejected_by: Option<&'static str>,
     pub points: Vec<PlotPoint>,
     /// One of so many steps is drawn.
     pub thinned_by: usize,
-    curve: Vec<CurvePoint>,
+    /// The fitted curve up to the largest drive that the fit used.
+    pub curve: Vec<CurvePoint>,
+    /// The curve beyond it, where no step supports it.
+    pub beyond: Vec<CurvePoint>,
+    pub rivals: Vec<Rival>,
+    /// Largest drive of any step.
+    pub drive_max: Option<f64>,
+    /// Largest mean rate over a level.
+    pub peak_rate: Option<f64>,
     max_rate: Estimate,
     threshold: Estimate,
 }
 
+/// Fraction of its full weight below which a step counts as down-weighted.
+const DOWNWEIGHTED: f64 = 0.5;
+
+/// The curve at a drive between its first and its last, by straight lines between the drives of its grid.
+fn curve_at(curve: &[CurvePoint], drive: f64) -> Option<CurvePoint> {
+    let after = curve.partition_point(|point| point.drive < drive);
+    let next = curve.get(after)?;
+    if next.drive == drive {
+        return Some(*next);
+    }
+    let before = curve.get(after.checked_sub(1)?)?;
+    let part = (drive - before.drive) / (next.drive - before.drive);
+    let between = |a: f64, b: f64| a + part * (b - a);
+    Some(CurvePoint {
+        drive,
+        rate_hz: between(before.rate_hz, next.rate_hz),
+        lo_hz: before.lo_hz.zip(next.lo_hz).map(|(a, b)| between(a, b)),
+        hi_hz: before.hi_hz.zip(next.hi_hz).map(|(a, b)| between(a, b)),
+    })
+}
+
+/// Every so many points of a curve and its last.
+fn thinned(curve: Vec<CurvePoint>, most: usize) -> Vec<CurvePoint> {
+    let last = curve.len().saturating_sub(1);
+    let stride = last.div_ceil(most.max(1)).max(1);
+    curve
+        .into_iter()
+        .enumerate()
+        .filter_map(|(i, point)| (i % stride == 0 || i == last).then_some(point))
+        .collect()
+}
+
 impl Panel {
-    /// The panel of a response with at most about `most` points and `most_curve` points of the curve.
+    /// The panel of a response with at most about `most` points and `most_curve` points of the curve, without rivals.
     pub(super) fn new(cell: &CellResult, response: &ResponseResult, most: usize, most_curve: usize) -> Self {
+        let mut curve: Vec<CurvePoint> = response
+            .curve
+            .iter()
+            .filter(|point| point.drive.is_finite() && point.rate_hz.is_finite())
+            .copied()
+            .collect();
+        let fitted = response.status == Status::Fitted;
+        let extra = finite(response.extra_sd_hz).unwrap_or(0.0);
         let thinned_by = response.rates.len().div_ceil(most.max(1)).max(1);
         let points = response
             .rates
@@ -46,44 +125,113 @@ impl Panel {
                 } else {
                     0.0
                 };
+                let expected = fit_se(rate).hypot(extra);
+                let weight = finite(rate.weight).filter(|weight| *weight > 0.0);
+                // Without a fit there is nothing a step could have been left out of.
+                let role = if fitted && !rate.used {
+                    Role::LeftOut
+                } else if weight.is_some_and(|weight| weight * expected * expected < DOWNWEIGHTED) {
+                    Role::Downweighted
+                } else {
+                    Role::Used
+                };
+                let residual = match role {
+                    Role::LeftOut => curve_at(&curve, drive).map(|fit| Residual {
+                        hz: rate.rate_hz - fit.rate_hz,
+                        sd: se,
+                    }),
+                    Role::Downweighted => rate.residual_hz.map(|hz| Residual { hz, sd: expected }),
+                    Role::Used => rate.residual_hz.map(|hz| Residual {
+                        hz,
+                        sd: weight.map_or(se, |weight| 1.0 / weight.sqrt()),
+                    }),
+                };
                 (drive.is_finite() && rate.rate_hz.is_finite()).then_some(PlotPoint {
                     drive,
                     rate: rate.rate_hz,
                     se,
-                    // Without a fit there is nothing a step could have been left out of.
-                    used: rate.used || response.status != Status::Fitted,
+                    role,
+                    residual: residual.filter(|r| fitted && r.hz.is_finite() && r.sd.is_finite()),
                 })
             })
             .collect();
-        let finite: Vec<CurvePoint> = response
-            .curve
-            .iter()
-            .filter(|point| point.drive.is_finite() && point.rate_hz.is_finite())
-            .copied()
-            .collect();
-        let stride = finite.len().saturating_sub(1).div_ceil(most_curve.max(1)).max(1);
-        let last = finite.len().saturating_sub(1);
-        let curve = finite
-            .into_iter()
-            .enumerate()
-            .filter_map(|(i, point)| (i % stride == 0 || i == last).then_some(point))
-            .collect();
+        let mut beyond = Vec::new();
+        if let Some(last_used) = finite(response.drive_max)
+            && let Some(end) = curve.last()
+            && last_used < end.drive
+            && let Some(border) = curve_at(&curve, last_used)
+        {
+            let within = curve.partition_point(|point| point.drive < last_used);
+            beyond.push(border);
+            beyond.extend(
+                curve
+                    .split_off(within)
+                    .into_iter()
+                    .filter(|p| p.drive > last_used),
+            );
+            curve.push(border);
+        }
         Self {
             unit: cell.drive_kind.unit(),
             response: response.response,
             status: response.status,
             ceiling: response.ceiling,
+            rejected_by: response
+                .flags
+                .iter()
+                .find(|flag| flag.severity == Severity::Reject)
+                .filter(|_| fitted && !response.usable)
+                .map(|flag| flag.flag),
             points,
             thinned_by,
-            curve,
+            curve: thinned(curve, most_curve),
+            beyond: thinned(beyond, most_curve),
+            rivals: Vec::new(),
+            drive_max: cell
+                .steps
+                .iter()
+                .map(|step| step.drive)
+                .filter(|drive| drive.is_finite())
+                .max_by(f64::total_cmp),
+            peak_rate: finite(response.peak_rate_hz),
             max_rate: response.max_rate,
             threshold: response.threshold,
         }
     }
 
+    /// The same panel with the other rate functions of the response up to the largest drive used, those with the
+    /// largest AICc weight first.
+    pub(super) fn with_rivals(mut self, response: &ResponseResult) -> Self {
+        let last_used = finite(response.drive_max).unwrap_or(f64::INFINITY);
+        self.rivals = response
+            .rivals
+            .iter()
+            .map(|rival| Rival {
+                curve: rival.curve,
+                weight: weight_of(response, rival.curve),
+                points: response
+                    .curve
+                    .iter()
+                    .zip(&rival.rates_hz)
+                    .map(|(point, rate)| (point.drive, *rate))
+                    .filter(|(drive, rate)| *drive <= last_used && drive.is_finite() && rate.is_finite())
+                    .collect(),
+            })
+            .collect();
+        let known = |rival: &Rival| rival.weight.unwrap_or(-1.0);
+        self.rivals
+            .sort_by(|a, b| known(b).total_cmp(&known(a)).then(a.curve.cmp(b.curve)));
+        self
+    }
+
     /// Whether some steps are drawn as not used.
     pub(super) fn has_unused(&self) -> bool {
-        self.points.iter().any(|point| !point.used)
+        self.points.iter().any(|point| point.role == Role::LeftOut)
+    }
+
+    /// Whether some steps are drawn as down-weighted.
+    pub(super) fn has_downweighted(&self) -> bool {
+        self.points.iter().any(|point| point.role == Role::Downweighted)
     }
 
     /// Whether a fitted curve is drawn.
@@ -91,9 +239,16 @@ impl Panel {
         self.curve.len() > 1
     }
 
+    /// Whether any residual is known.
+    pub(super) fn has_residuals(&self) -> bool {
+        self.points
+            .iter()
+            .any(|point| point.residual.is_some() && point.role != Role::LeftOut)
+    }
+
     /// Whether the ceiling is drawn as a line.
     pub(super) fn has_ceiling(&self) -> bool {
-        rate_range(self).1.is_some()
+        rate_range(self, true).1.is_some()
     }
 
     /// Whether a threshold is marked.
@@ -101,12 +256,16 @@ impl Panel {
         finite(self.threshold.value).is_some()
     }
 
-    /// The verdict in one word, or why there is no fit.
-    pub(super) fn verdict(&self) -> &'static str {
-        match (self.status, self.ceiling) {
+    /// The verdict, with the flag that makes the fit unusable; or why there is no fit.
+    pub(super) fn verdict(&self) -> String {
+        let word = match (self.status, self.ceiling) {
             (Status::Fitted, Some(verdict)) => verdict.name(),
             (Status::Fitted, None) => "fitted",
             (status, _) => status.name(),
+        };
+        match self.rejected_by {
+            Some(flag) => format!("{word}, not usable: {flag}"),
+            None => word.into(),
         }
     }
 
@@ -114,6 +273,15 @@ impl Panel {
     pub(super) fn dashes(&self) -> Option<&'static str> {
         verdict_dashes(self.ceiling)
     }
+}
+
+/// AICc weight of a rate function in the goodness of a response.
+pub(super) fn weight_of(response: &ResponseResult, curve: &str) -> Option<f64> {
+    response
+        .goodness
+        .iter()
+        .find(|goodness| goodness.curve == curve)
+        .and_then(|goodness| finite(goodness.aicc_weight))
 }
 
 /// Line style of a verdict in the overview.
@@ -148,8 +316,12 @@ pub(super) struct PanelStyle {
     pub headroom: f64,
     /// Room below 0 Hz, for the threshold.
     pub strip: f64,
-    /// Whether notes are written and the curve is drawn solid whatever the verdict.
+    /// Whether notes are written and the curve is drawn beyond the steps used as well.
     pub large: bool,
+    /// Whether the dashes of the curve tell the verdict.
+    pub verdict_dashes: bool,
+    /// Whether the drive axis carries its numbers.
+    pub drive_labels: bool,
 }
 
 /// Most the ceiling may stand above the data to be drawn rather than named.
@@ -157,12 +329,12 @@ const CEILING_IN_SIGHT: f64 = 1.6;
 /// Highest rate of the axis where no step has a rate, Hz.
 const SILENT_RANGE: f64 = 5.0;
 
-fn finite(number: Option<f64>) -> Option<f64> {
+pub(super) fn finite(number: Option<f64>) -> Option<f64> {
     number.filter(|n| n.is_finite())
 }
 
-/// Highest rate shown and the ceiling where it is in sight.
-fn rate_range(panel: &Panel) -> (f64, Option<f64>) {
+/// Highest rate shown and, where it is in sight and to be drawn, the ceiling.
+pub(super) fn rate_range(panel: &Panel, with_ceiling: bool) -> (f64, Option<f64>) {
     let data = panel.points.iter().map(|p| p.rate).fold(0.0, f64::max);
     let limit = if data > 0.0 { 1.3 * data } else { f64::INFINITY };
     let bars = panel
@@ -181,7 +353,8 @@ fn rate_range(panel: &Panel) -> (f64, Option<f64>) {
         .filter_map(|p| finite(p.hi_hz))
         .map(|hi| hi.min(1.2 * curve));
     let mut top = band.fold(curve, f64::max);
-    let ceiling = finite(panel.max_rate.value).filter(|c| *c > 0.0 && *c <= CEILING_IN_SIGHT * curve);
+    let ceiling =
+        finite(panel.max_rate.value).filter(|c| with_ceiling && *c > 0.0 && *c <= CEILING_IN_SIGHT * curve);
     if let Some(ceiling) = ceiling {
         let hi = finite(panel.max_rate.hi).map_or(ceiling, |hi| hi.min(1.25 * ceiling.max(curve)));
         top = top.max(ceiling).max(hi);
@@ -203,13 +376,13 @@ fn rate_range(panel: &Panel) -> (f64, Option<f64>) {
 }
 
 /// Lowest and highest drive shown.
-fn drive_range(panel: &Panel) -> (f64, f64) {
+pub(super) fn drive_range(panel: &Panel) -> (f64, f64) {
     let drives = || {
         panel
             .points
             .iter()
             .map(|p| p.drive)
-            .chain(panel.curve.iter().map(|p| p.drive))
+            .chain(panel.curve.iter().chain(&panel.beyond).map(|p| p.drive))
     };
     let (mut low, mut high) = drives().fold((f64::INFINITY, f64::NEG_INFINITY), |(low, high), d| {
         (low.min(d), high.max(d))
@@ -241,21 +414,33 @@ fn drive_range(panel: &Panel) -> (f64, f64) {
 
 /// Draws a panel with its axes and tick labels, without axis names.
 pub(super) fn draw_panel(canvas: &mut Canvas, panel: &Panel, frame: Frame, style: &PanelStyle) {
-    let (top_rate, ceiling) = rate_range(panel);
+    let (top_rate, ceiling) = rate_range(panel, true);
     let (low, high) = drive_range(panel);
     let (right, bottom) = (frame.left + frame.width, frame.top + frame.height);
     let x = Scale::new(low, high, frame.left, right);
     let y = Scale::new(0.0, top_rate, bottom - style.strip, frame.top + style.headroom);
 
-    draw_axes(canvas, (&x, &y), frame, style, ((low, high), top_rate));
+    draw_drive_axis(canvas, &x, frame, style, (low, high));
+    draw_value_axis(canvas, &y, frame, style, (0.0, top_rate));
     draw_band(canvas, panel, &x, &y);
     draw_points(canvas, panel, &x, &y, style);
+    for rival in &panel.rivals {
+        // Where it leaves the panel it is broken off rather than drawn along the edge.
+        for run in rival.points.split(|(_, rate)| !y.holds(*rate)) {
+            let line: Vec<(f64, f64)> = run.iter().map(|(d, r)| (x.clamped(*d), y.at(*r))).collect();
+            canvas.path(&line, rival_stroke(rival.curve));
+        }
+    }
     let curve: Vec<(f64, f64)> = panel
         .curve
         .iter()
         .map(|p| (x.clamped(p.drive), y.clamped(p.rate_hz)))
         .collect();
-    let dashes = if style.large { None } else { panel.dashes() };
+    let dashes = if style.verdict_dashes {
+        panel.dashes()
+    } else {
+        None
+    };
     canvas.path(
         &curve,
         Stroke {
@@ -264,6 +449,15 @@ pub(super) fn draw_panel(canvas: &mut Canvas, panel: &Panel, frame: Frame, style
             dashes,
         },
     );
+    if style.large {
+        let beyond: Vec<(f64, f64)> = panel
+            .beyond
+            .iter()
+            .take_while(|p| y.holds(p.rate_hz))
+            .map(|p| (x.clamped(p.drive), y.at(p.rate_hz)))
+            .collect();
+        canvas.path(&beyond, BEYOND);
+    }
     draw_threshold(canvas, panel, &x, bottom, style);
     draw_ceiling(canvas, panel, ceiling, &y, frame, style);
     if style.large {
@@ -271,12 +465,40 @@ pub(super) fn draw_panel(canvas: &mut Canvas, panel: &Panel, frame: Frame, style
     }
 }
 
-fn draw_axes(
+/// The fitted curve where no step supports it.
+pub(super) const BEYOND: Stroke = Stroke {
+    colour: CURVE,
+    width: 1.1,
+    dashes: Some("3 3"),
+};
+
+/// Colour and dashes of another rate function: the palette's colours that points and fit do not have, each with
+/// dashes of its own.
+pub(super) fn rival_stroke(curve: &str) -> Stroke {
+    let (colour, dashes) = match curve {
+        "hyperbola" => ("#009E73", "7 2.5"),
+        "smoothed-ramp" => ("#E69F00", "2.5 2"),
+        "ramp" => ("#E69F00", "8 2 2 2"),
+        "logistic" => ("#CC79A7", "4.5 2"),
+        "hill" => ("#56B4E9", "9 2"),
+        "refractory-integrator" => ("#000000", "1.5 2.5"),
+        "square-root" => ("#009E73", "5 2 1.5 2 1.5 2"),
+        _ => ("#56B4E9", "3 1.5"),
+    };
+    Stroke {
+        colour,
+        width: 1.1,
+        dashes: Some(dashes),
+    }
+}
+
+/// The axis at the foot of a frame.
+pub(super) fn draw_drive_axis(
     canvas: &mut Canvas,
-    (x, y): (&Scale, &Scale),
+    x: &Scale,
     frame: Frame,
     style: &PanelStyle,
-    ((low, high), top_rate): ((f64, f64), f64),
+    (low, high): (f64, f64),
 ) {
     let axis = solid(INK, 0.8);
     let (right, bottom) = (frame.left + frame.width, frame.top + frame.height);
@@ -285,7 +507,6 @@ fn draw_axes(
         anchor: Anchor::Middle,
         ..font(style.label)
     };
-    canvas.line((frame.left, frame.top), (frame.left, bottom), axis);
     canvas.line((frame.left, bottom), (right, bottom), axis);
     // Fewer ticks where the labels would touch.
     let shown = (1..=style.x_ticks)
@@ -304,13 +525,32 @@ fn draw_axes(
     for (value, text) in shown.unwrap_or_default() {
         let at = x.at(value);
         canvas.line((at, bottom), (at, bottom + length), axis);
-        canvas.text((at, bottom + length + 1.05 * style.label), &text, label);
+        if style.drive_labels {
+            canvas.text((at, bottom + length + 1.05 * style.label), &text, label);
+        }
     }
+}
+
+/// The axis on the left of a frame.
+pub(super) fn draw_value_axis(
+    canvas: &mut Canvas,
+    y: &Scale,
+    frame: Frame,
+    style: &PanelStyle,
+    (low, high): (f64, f64),
+) {
+    let axis = solid(INK, 0.8);
+    let length = 0.4 * style.label;
+    canvas.line(
+        (frame.left, frame.top),
+        (frame.left, frame.top + frame.height),
+        axis,
+    );
     let label = Font {
         anchor: Anchor::End,
-        ..label
+        ..font(style.label)
     };
-    for (value, text) in ticks(0.0, top_rate, style.y_ticks) {
+    for (value, text) in ticks(low, high, style.y_ticks) {
         let at = y.at(value);
         canvas.line((frame.left - length, at), (frame.left, at), axis);
         canvas.text(
@@ -322,7 +562,7 @@ fn draw_axes(
 }
 
 /// The band, in one piece for each run of the grid where both bounds are known.
-fn draw_band(canvas: &mut Canvas, panel: &Panel, x: &Scale, y: &Scale) {
+pub(super) fn draw_band(canvas: &mut Canvas, panel: &Panel, x: &Scale, y: &Scale) {
     let mut upper: Vec<(f64, f64)> = Vec::new();
     let mut lower: Vec<(f64, f64)> = Vec::new();
     let mut flush = |upper: &mut Vec<(f64, f64)>, lower: &mut Vec<(f64, f64)>| {
@@ -348,7 +588,7 @@ fn draw_band(canvas: &mut Canvas, panel: &Panel, x: &Scale, y: &Scale) {
 fn draw_points(canvas: &mut Canvas, panel: &Panel, x: &Scale, y: &Scale, style: &PanelStyle) {
     for point in &panel.points {
         let at = (x.clamped(point.drive), y.clamped(point.rate));
-        if !point.used {
+        if point.role == Role::LeftOut {
             canvas.cross(at, 0.8 * style.radius, solid(POINT, 0.9));
             continue;
         }
@@ -360,15 +600,17 @@ fn draw_points(canvas: &mut Canvas, panel: &Panel, x: &Scale, y: &Scale, style: 
         if low - at.1 > style.radius {
             canvas.line((at.0, at.1 + style.radius), (at.0, low), solid(POINT, 0.8));
         }
-        canvas.circle(
-            at,
-            style.radius,
-            solid(POINT, if style.large { 1.1 } else { 0.8 }),
-        );
+        let line = solid(POINT, if style.large { 1.1 } else { 0.8 });
+        if point.role == Role::Downweighted {
+            canvas.diamond(at, 1.25 * style.radius, line);
+        } else {
+            canvas.circle(at, style.radius, line);
+        }
     }
 }
 
-fn triangle(canvas: &mut Canvas, tip: (f64, f64), towards: (f64, f64), size: f64) {
+/// A filled triangle with its tip at a point.
+pub(super) fn triangle(canvas: &mut Canvas, tip: (f64, f64), towards: (f64, f64), size: f64) {
     let (x, y) = tip;
     let (dx, dy) = towards;
     let base = (x - dx * size, y - dy * size);
