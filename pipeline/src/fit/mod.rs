@@ -3,9 +3,11 @@
 mod estimates;
 mod extra_sd;
 pub mod hyperbola_fit;
+pub mod leave_one_out;
 pub mod main_fit;
 pub mod objective;
 mod profile;
+pub mod rival_fit;
 pub mod solver;
 mod starts;
 
@@ -14,3 +16,4 @@ pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
 pub use objective::Point;
 pub use profile::{Side, SideSearch};
+pub use rival_fit::{NoRival, RivalFit, fit_rival};
