@@ -1,14 +1,18 @@
 //! From rates to a rate function: objective, solver, extra SD, profiles.
 
+pub mod bootstrap;
+pub mod bootstrap_interval;
 mod estimates;
 mod extra_sd;
 pub mod hyperbola_fit;
 pub mod main_fit;
 pub mod objective;
 mod profile;
+mod resample_fit;
 pub mod solver;
 mod starts;
 
+pub use bootstrap::{Bootstrap, BootstrapInterval, BootstrapKind, BootstrapSettings, bootstrap};
 pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
