@@ -23,7 +23,7 @@ use rand_chacha::ChaCha8Rng;
 use rand_distr::{Distribution, StandardNormal};
 use serde::{Deserialize, Serialize};
 
-use super::bootstrap_interval::{ReplicateInterval, intervals};
+use super::bootstrap_interval::{ReplicateInterval, acceleration, intervals};
 use super::main_fit::{self, MainFit, Scatter};
 use super::objective::{Chart, Point, evaluate};
 use super::resample_fit::{Refit, ResampleFit, Sample, points_of};
@@ -147,7 +147,7 @@ pub fn bootstrap(
         bca: None,
     }; 5];
     for i in 0..5 {
-        found[i] = intervals(at[i], &mut replicates[i], &jackknife[i])?;
+        found[i] = intervals(at[i], &mut replicates[i], acceleration(&jackknife[i]))?;
     }
     let noise_free = fit.options.lower[3];
     let log = |value: f64| value.exp();

@@ -7,16 +7,21 @@ use statrs::distribution::{ContinuousCDF, Normal};
 pub struct ReplicateInterval {
     /// Percentile interval (Efron & Tibshirani 1993, section 13.3).
     pub percentile: [f64; 2],
-    /// BCa interval; `None` where [`bca_levels`] has no answer.
+    /// BCa interval; `None` without an acceleration and where [`bca_levels`] has no answer.
     pub bca: Option<[f64; 2]>,
 }
 
 /// Lower and upper tail of a 95 % interval.
 const TAILS: [f64; 2] = [0.025, 0.975];
 
-/// Percentile and BCa intervals of an estimate from its bootstrap `replicates` and the `jackknife` values of the same
-/// quantity, one a left-out point. Sorts the replicates. `None` without replicates, or where one is not a number.
-pub fn intervals(estimate: f64, replicates: &mut [f64], jackknife: &[f64]) -> Option<ReplicateInterval> {
+/// Percentile and BCa intervals of an estimate from its bootstrap `replicates`; `acceleration` is that of BCa, see
+/// [`acceleration`], without which there is no BCa interval. Sorts the replicates. `None` without replicates, or where
+/// one is not a number.
+pub fn intervals(
+    estimate: f64,
+    replicates: &mut [f64],
+    acceleration: Option<f64>,
+) -> Option<ReplicateInterval> {
     if replicates.is_empty() || !estimate.is_finite() || replicates.iter().any(|r| r.is_nan()) {
         return None;
     }
@@ -24,7 +29,9 @@ pub fn intervals(estimate: f64, replicates: &mut [f64], jackknife: &[f64]) -> Op
     let at = |levels: [f64; 2]| levels.map(|level| quantile(replicates, level));
     Some(ReplicateInterval {
         percentile: at(TAILS),
-        bca: bca_levels(estimate, replicates, jackknife).map(at),
+        bca: acceleration
+            .and_then(|a| bca_levels(estimate, replicates, a))
+            .map(at),
     })
 }
 
@@ -32,8 +39,8 @@ pub fn intervals(estimate: f64, replicates: &mut [f64], jackknife: &[f64]) -> Op
 /// Tibshirani 1993, equations 14.10 and 14.14).
 ///
 /// The bias correction counts replicates that tie with the estimate half. `None` where all replicates lie on one side
-/// of the estimate, or the jackknife values do not vary, so that bias or acceleration is not defined.
-pub fn bca_levels(estimate: f64, replicates: &[f64], jackknife: &[f64]) -> Option<[f64; 2]> {
+/// of the estimate, so that it is not defined, or where the correction by the acceleration `a` is too large for use.
+pub fn bca_levels(estimate: f64, replicates: &[f64], a: f64) -> Option<[f64; 2]> {
     let normal = Normal::standard();
     let below = replicates.iter().filter(|r| **r < estimate).count() as f64;
     let ties = replicates.iter().filter(|r| **r == estimate).count() as f64;
@@ -42,7 +49,6 @@ pub fn bca_levels(estimate: f64, replicates: &[f64], jackknife: &[f64]) -> Optio
         return None;
     }
     let bias = normal.inverse_cdf(part);
-    let a = acceleration(jackknife)?;
     let levels = TAILS.map(|tail| {
         let z = bias + normal.inverse_cdf(tail);
         normal.cdf(bias + z / (1.0 - a * z))
@@ -90,7 +96,7 @@ mod tests {
     fn a_symmetric_distribution_needs_no_correction() {
         let mut replicates: Vec<f64> = (0..=1000).map(f64::from).collect();
         let jackknife: Vec<f64> = (0..=20).map(f64::from).collect();
-        let found = intervals(500.0, &mut replicates, &jackknife).unwrap();
+        let found = intervals(500.0, &mut replicates, acceleration(&jackknife)).unwrap();
         assert_eq!(found.percentile, [25.0, 975.0]);
         let bca = found.bca.unwrap();
         assert!(
@@ -102,10 +108,10 @@ mod tests {
     #[test]
     fn an_estimate_outside_its_replicates_has_no_bca() {
         let mut replicates = [1.0, 2.0, 3.0];
-        let found = intervals(5.0, &mut replicates, &[1.0, 2.0, 4.0]).unwrap();
+        let found = intervals(5.0, &mut replicates, Some(0.01)).unwrap();
         assert_eq!(found.bca, None);
-        assert!(intervals(5.0, &mut [], &[1.0, 2.0]).is_none());
-        assert!(intervals(5.0, &mut [1.0, f64::NAN], &[1.0, 2.0]).is_none());
+        assert!(intervals(5.0, &mut [], Some(0.0)).is_none());
+        assert!(intervals(5.0, &mut [1.0, f64::NAN], Some(0.0)).is_none());
         assert_eq!(acceleration(&[2.0, 2.0, 2.0]), None);
         assert_eq!(acceleration(&[]), None);
     }

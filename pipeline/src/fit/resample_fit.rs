@@ -14,14 +14,28 @@ use crate::curve::smoothed_hyperbola::vectorised;
 /// The search has arrived once its next step promises to lower the cost by this much or less. The cost is in squared
 /// standard deviations, so the parameters are then within sqrt(0.001) = 0.03 standard errors.
 const PROMISE: f64 = 1e-3;
+/// What a search may leave unearned after `pass` passes. One that takes long moves along a valley, in a parameter that
+/// its resample hardly determines: the tolerance grows to a tenth and then to a fifth of a standard error.
+fn tolerance(pass: u32) -> f64 {
+    match pass {
+        0..12 => PROMISE,
+        12..24 => 10.0 * PROMISE,
+        _ => 40.0 * PROMISE,
+    }
+}
+
 /// The extra variance has settled once it moves by less than this fraction of the total variance.
 const SETTLED: f64 = 0.01;
 /// Passes of the curve after which the search gives up.
 const PASSES: u32 = 60;
 /// Accepted steps in a row that each gained less than the promise asked for: a valley without a floor.
-const STALLED: u32 = 6;
-/// Longest step in ln noise SD and ln gain, and in the other two as a fraction of the search's stride.
+const STALLED: u32 = 5;
+/// Longest step in 1/max rate and threshold, as a multiple of the stride of the search.
 const STRIDE: f64 = 1.5;
+/// Longest last step, which no pass follows, as a multiple of the stride of the search.
+const LAST_STRIDE: f64 = 0.2;
+/// What is left at least of 1/gain and of the noise variance after one step, and the inverse of how far they may grow.
+const LEFT: f64 = 0.05;
 
 /// Rates and squared standard errors of a resample, one a point in the order of the points. A point that is left out
 /// has an infinite variance.
@@ -132,7 +146,9 @@ impl<'a> ResampleFit<'a> {
         let mut sums = self.sums();
         let mut damping = 1e-4;
         let mut stalled = 0;
-        for _ in 0..PASSES {
+        let mut raised = false;
+        for pass in 0..PASSES {
+            let enough = tolerance(pass);
             let free = self.free(&x, &sums);
             if !free.contains(&true) {
                 return Some(Refit {
@@ -140,11 +156,15 @@ impl<'a> ResampleFit<'a> {
                     variance,
                 });
             }
-            if let Some(step) = self.step(&x, &sums, &free, 0.0)
-                && settled
-                && promised(&sums, &step) <= PROMISE
+            // The promise without regard to bounds: a parameter that wants to leave is first taken to its bound.
+            let held = free.map(|f| (!f).then_some(0.0));
+            if settled
+                && let Some(step) = damped(&sums, &held, 0.0)
+                && promised(&sums, &step) <= enough
             {
-                let parameters = self.moved(&x, &step);
+                // A long step for so little is one along a valley, where the quadratic model holds no further.
+                let short = (0..4).all(|i| step[i].abs() <= LAST_STRIDE * self.options.stride[i]);
+                let parameters = if short { self.moved(&x, &step) } else { x };
                 return Some(Refit { parameters, variance });
             }
             if stalled >= STALLED {
@@ -171,8 +191,12 @@ impl<'a> ResampleFit<'a> {
             let cost = self.cost_of_next();
             if cost < sums.cost {
                 let gain = sums.cost - cost;
-                stalled = if gain < PROMISE { stalled + 1 } else { 0 };
-                damping *= 0.1;
+                stalled = if gain < enough { stalled + 1 } else { 0 };
+                // A damping that had to be raised is not lowered at once.
+                if !raised {
+                    damping *= 0.1;
+                }
+                raised = false;
                 x = trial;
                 std::mem::swap(&mut self.now, &mut self.next);
                 if estimated {
@@ -183,15 +207,18 @@ impl<'a> ResampleFit<'a> {
                 }
                 sums = self.sums();
             } else {
-                let shift: [f64; 4] = std::array::from_fn(|i| trial[i] - x[i]);
-                if settled && promised(&sums, &shift) <= PROMISE {
-                    return Some(Refit {
-                        parameters: x,
-                        variance,
-                    });
+                // Too little to gain for the accuracy of the curve to tell.
+                if promised(&sums, &step) <= enough {
+                    if settled {
+                        return Some(Refit {
+                            parameters: x,
+                            variance,
+                        });
+                    }
+                    settled = true;
                 }
-                settled |= promised(&sums, &shift) <= PROMISE;
-                damping = 10.0 * damping.max(1e-3);
+                damping = 10.0 * damping.max(1e-4);
+                raised = true;
                 if !(damping < 1e12) {
                     return None;
                 }
@@ -301,32 +328,54 @@ impl<'a> ResampleFit<'a> {
         })
     }
 
-    /// Damped Gauss-Newton step. Where it would carry the ceiling or the noise through its lower bound, that parameter
-    /// goes to the bound and the others are solved for again.
+    /// Damped Gauss-Newton step. A parameter that it would carry past a bound, or further than one step may, goes that
+    /// far, and the others are solved for again.
     fn step(&self, x: &[f64; 4], sums: &NormalSums<4>, free: &[bool; 4], damping: f64) -> Option<[f64; 4]> {
+        let o = &self.options;
+        // In 1/gain and the noise variance, as in `moved`.
+        let lowest = [
+            -((x[0] - o.lower[0]).exp_m1()).min(1.0 / LEFT - 1.0),
+            (o.lower[1] - x[1]).max(-STRIDE * o.stride[1]),
+            (o.lower[2] - x[2]).max(-STRIDE * o.stride[2]),
+            0.5 * (2.0 * (o.lower[3] - x[3])).exp_m1().max(LEFT - 1.0),
+        ];
+        let highest = [
+            (-(x[0] - o.upper[0]).exp_m1()).min(1.0 - LEFT),
+            (o.upper[1] - x[1]).min(STRIDE * o.stride[1]),
+            (o.upper[2] - x[2]).min(STRIDE * o.stride[2]),
+            0.5 * (2.0 * (o.upper[3] - x[3])).exp_m1().min(1.0 / LEFT - 1.0),
+        ];
         let mut held: [Option<f64>; 4] = free.map(|f| (!f).then_some(0.0));
         let mut step = damped(sums, &held, damping)?;
-        for i in [1, 3] {
-            let to_bound = self.options.lower[i] - x[i];
-            if held[i].is_none() && step[i] < to_bound {
-                held[i] = Some(to_bound);
-                step = damped(sums, &held, damping)?;
-            }
+        for _ in 0..4 {
+            // The worst offender first: the others may come back once it is held.
+            let beyond = |i: usize| {
+                let (low, high) = (lowest[i], highest[i]);
+                let over = (step[i] / if step[i] < 0.0 { low } else { high }).abs();
+                (held[i].is_none() && (step[i] < low || step[i] > high)).then_some((over, i))
+            };
+            let Some((_, i)) = (0..4).filter_map(beyond).max_by(|a, b| a.0.total_cmp(&b.0)) else {
+                break;
+            };
+            held[i] = Some(step[i].max(lowest[i]).min(highest[i]));
+            step = damped(sums, &held, damping)?;
         }
         Some(step)
     }
 
-    /// Where `step` leads, no parameter further than its stride, all within the bounds.
+    /// Where `step` leads, within the bounds. The boundaries that a search runs into are those of a vanishing half-rise
+    /// and of vanishing noise, and the curve is smooth there in 1/gain and in the noise variance, not in the
+    /// logarithms: a step `d` in ln gain is made as 1/gain (1 - d), one in ln noise SD as variance (1 + 2 d), which for
+    /// small steps is the same.
     fn moved(&self, x: &[f64; 4], step: &[f64; 4]) -> [f64; 4] {
         let o = &self.options;
-        let mut part: f64 = 1.0;
-        for i in 0..4 {
-            let longest = STRIDE * o.stride[i];
-            if step[i].abs() > longest {
-                part = part.min(longest / step[i].abs());
-            }
-        }
-        std::array::from_fn(|i| (x[i] + part * step[i]).max(o.lower[i]).min(o.upper[i]))
+        let moved = [
+            x[0] - (-step[0]).ln_1p(),
+            x[1] + step[1],
+            x[2] + step[2],
+            x[3] + 0.5 * (2.0 * step[3]).ln_1p(),
+        ];
+        std::array::from_fn(|i| moved[i].max(o.lower[i]).min(o.upper[i]))
     }
 }
 
