@@ -5,10 +5,10 @@ use std::time::Instant;
 
 use halfrise::fit::bootstrap_interval::{acceleration, intervals};
 use halfrise::fit::main_fit::{self, Scatter};
+use halfrise::fit::objective::{Chart, evaluate};
 use halfrise::fit::{
     Bootstrap, BootstrapInterval, BootstrapKind, BootstrapSettings, Point, bootstrap, estimates,
 };
-use halfrise::fit::objective::{Chart, evaluate};
 use halfrise::rates::{Response, cell_interval_cv, fit_se, step_rates};
 use halfrise::settings::Analysis;
 use rand::{RngExt, SeedableRng};
@@ -22,7 +22,12 @@ fn percentile_and_bca_agree_with_scipy() {
     let expected = json("bootstrap/bootstrap.json");
     for name in ["mean", "variance", "ties", "degenerate"] {
         let list = |value: &serde_json::Value| -> Vec<f64> {
-            value.as_array().unwrap().iter().map(|v| v.as_f64().unwrap()).collect()
+            value
+                .as_array()
+                .unwrap()
+                .iter()
+                .map(|v| v.as_f64().unwrap())
+                .collect()
         };
         let case = &expected[name];
         let mut replicates: Vec<f64> = numbers(&format!("bootstrap/replicates_{name}.csv"), ["replicate"])
@@ -48,10 +53,17 @@ fn percentile_and_bca_agree_with_scipy() {
 
 #[test]
 fn the_acceleration_printed_by_efron_and_tibshirani() {
-    let scores: Vec<f64> = numbers("bootstrap/spatial.csv", ["score"]).into_iter().map(|[s]| s).collect();
+    let scores: Vec<f64> = numbers("bootstrap/spatial.csv", ["score"])
+        .into_iter()
+        .map(|[s]| s)
+        .collect();
     let variance = |left_out: Option<usize>| {
-        let kept: Vec<f64> =
-            scores.iter().enumerate().filter(|(i, _)| Some(*i) != left_out).map(|(_, s)| *s).collect();
+        let kept: Vec<f64> = scores
+            .iter()
+            .enumerate()
+            .filter(|(i, _)| Some(*i) != left_out)
+            .map(|(_, s)| *s)
+            .collect();
         let n = kept.len() as f64;
         let mean = kept.iter().sum::<f64>() / n;
         kept.iter().map(|s| (s - mean).powi(2)).sum::<f64>() / n
@@ -129,12 +141,20 @@ fn coverage(
     repeats: usize,
     regular: bool,
 ) -> [[f64; 3]; 5] {
-    let settings = BootstrapSettings { kind, resamples, seed: 11 };
+    let settings = BootstrapSettings {
+        kind,
+        resamples,
+        seed: 11,
+    };
     let mut hits = [[0.0; 3]; 5];
     let (mut tried, mut done, mut drawn, mut failed, mut again) = (0.0, 0.0, 0, 0, 0);
     for seed in 0..cells {
         // Between 20 and 80 steps where nothing repeats.
-        let count = if repeats == 1 { levels / 2 + (seed as usize * 7) % (3 * levels / 2) } else { levels };
+        let count = if repeats == 1 {
+            levels / 2 + (seed as usize * 7) % (3 * levels / 2)
+        } else {
+            levels
+        };
         let (points, truth) = cell(seed, count, repeats);
         let top = points.last().unwrap().drive;
         let determined = truth[3] >= top / (count - 1) as f64 && top >= truth[2] + truth[1];
@@ -145,8 +165,14 @@ fn coverage(
         let Some(fit) = main_fit::fit(&points, Scatter::Estimated) else {
             continue;
         };
-        let Some(found) = bootstrap(&points, Scatter::Estimated, &fit, &settings, &seed.to_string(), "whole")
-        else {
+        let Some(found) = bootstrap(
+            &points,
+            Scatter::Estimated,
+            &fit,
+            &settings,
+            &seed.to_string(),
+            "whole",
+        ) else {
             continue;
         };
         done += 1.0;
@@ -165,13 +191,18 @@ fn coverage(
         }
     }
     assert!(done >= 0.99 * tried, "{done} of {tried} cells");
-    println!("{kind:?} regular {regular} {done} cells {levels} x {repeats}: {failed} failed, {again} searched again of {drawn} resamples");
+    println!(
+        "{kind:?} regular {regular} {done} cells {levels} x {repeats}: {failed} failed, {again} searched again of {drawn} resamples"
+    );
     assert!((failed as f64) < 0.002 * drawn as f64);
     let names = ["max rate", "half-rise", "threshold", "noise SD", "initial gain"];
     for (hit, name) in hits.iter_mut().zip(names) {
         let with = hit[2];
         *hit = [hit[0] / done, hit[1] / with, with / done];
-        println!("  {name}: percentile {:.3}, BCa {:.3} of {:.3}", hit[0], hit[1], hit[2]);
+        println!(
+            "  {name}: percentile {:.3}, BCa {:.3} of {:.3}",
+            hit[0], hit[1], hit[2]
+        );
     }
     hits
 }
@@ -187,7 +218,11 @@ fn bca_intervals_cover_the_truth() {
 #[test]
 fn a_thousand_resamples_cost_less_than_sixty_fits() {
     let cells: Vec<Vec<Point>> = (0..100).map(|seed| cell(seed, 30, 1).0).collect();
-    let settings = BootstrapSettings { kind: BootstrapKind::Parametric, resamples: 1000, seed: 1 };
+    let settings = BootstrapSettings {
+        kind: BootstrapKind::Parametric,
+        resamples: 1000,
+        seed: 1,
+    };
     let start = Instant::now();
     let mut passes = 0;
     let fits: Vec<_> = cells
@@ -203,7 +238,9 @@ fn a_thousand_resamples_cost_less_than_sixty_fits() {
     let start = Instant::now();
     let mut more = 0;
     for (points, fit) in cells.iter().zip(&fits) {
-        more += bootstrap(points, Scatter::Estimated, fit, &settings, "c", "whole").unwrap().passes;
+        more += bootstrap(points, Scatter::Estimated, fit, &settings, "c", "whole")
+            .unwrap()
+            .passes;
     }
     let resampled = start.elapsed().as_secs_f64();
     println!(

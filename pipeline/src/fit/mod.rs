@@ -9,6 +9,7 @@ pub mod main_fit;
 pub mod objective;
 mod profile;
 mod resample_fit;
+pub mod robust;
 pub mod solver;
 mod starts;
 
@@ -17,4 +18,5 @@ pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
 pub use objective::Point;
+pub use robust::{Robust, robust};
 pub use profile::{Side, profile_side};

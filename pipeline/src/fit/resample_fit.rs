@@ -18,8 +18,8 @@ const PROMISE: f64 = 1e-3;
 /// its resample hardly determines: the tolerance grows to a tenth and then to a fifth of a standard error.
 fn tolerance(pass: u32) -> f64 {
     match pass {
-        0..12 => PROMISE,
-        12..24 => 10.0 * PROMISE,
+        0..28 => PROMISE,
+        28..44 => 10.0 * PROMISE,
         _ => 40.0 * PROMISE,
     }
 }
@@ -29,7 +29,7 @@ const SETTLED: f64 = 0.01;
 /// Passes of the curve after which the search gives up.
 const PASSES: u32 = 60;
 /// Accepted steps in a row that each gained less than the promise asked for: a valley without a floor.
-const STALLED: u32 = 5;
+const STALLED: u32 = 6;
 /// Longest step in 1/max rate and threshold, as a multiple of the stride of the search.
 const STRIDE: f64 = 1.5;
 /// Longest last step, which no pass follows, as a multiple of the stride of the search.
