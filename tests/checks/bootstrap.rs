@@ -3,7 +3,7 @@
 
 use std::time::Instant;
 
-use halfrise::fit::bootstrap_interval::{acceleration, intervals};
+use halfrise::fit::bootstrap_interval::{TAILS, acceleration, intervals};
 use halfrise::fit::main_fit::{self, Scatter};
 use halfrise::fit::objective::{Chart, evaluate};
 use halfrise::fit::{
@@ -36,7 +36,13 @@ fn percentile_and_bca_agree_with_scipy() {
             .collect();
         assert_eq!(replicates.len(), 999);
         let estimate = case["estimate"].as_f64().unwrap();
-        let found = intervals(estimate, &mut replicates, acceleration(&list(&case["jackknife"]))).unwrap();
+        let found = intervals(
+            estimate,
+            &mut replicates,
+            acceleration(&list(&case["jackknife"])),
+            TAILS,
+        )
+        .unwrap();
         let close = |found: [f64; 2], key: &str| {
             for (found, expected) in found.iter().zip(list(&case[key])) {
                 assert_close(&format!("{name} {key}"), *found, expected, 1e-10);

@@ -2,7 +2,7 @@
 
 use statrs::distribution::{ContinuousCDF, Normal};
 
-/// Both 95 % intervals of one quantity, on the scale of its replicates.
+/// Both intervals of one quantity, on the scale of its replicates.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct ReplicateInterval {
     /// Percentile interval (Efron & Tibshirani 1993, section 13.3).
@@ -11,16 +11,17 @@ pub struct ReplicateInterval {
     pub bca: Option<[f64; 2]>,
 }
 
-/// Lower and upper tail of a 95 % interval.
-const TAILS: [f64; 2] = [0.025, 0.975];
+/// Lower and upper level of a 95 % interval.
+pub const TAILS: [f64; 2] = [0.025, 0.975];
 
-/// Percentile and BCa intervals of an estimate from its bootstrap `replicates`; `acceleration` is that of BCa, see
+/// Percentile and BCa intervals of an estimate from its bootstrap `replicates` at the levels `tails`; `acceleration` is that of BCa, see
 /// [`acceleration`], without which there is no BCa interval. Sorts the replicates. `None` without replicates, or where
 /// one is not a number.
 pub fn intervals(
     estimate: f64,
     replicates: &mut [f64],
     acceleration: Option<f64>,
+    tails: [f64; 2],
 ) -> Option<ReplicateInterval> {
     if replicates.is_empty() || !estimate.is_finite() || replicates.iter().any(|r| r.is_nan()) {
         return None;
@@ -28,19 +29,19 @@ pub fn intervals(
     replicates.sort_by(f64::total_cmp);
     let at = |levels: [f64; 2]| levels.map(|level| quantile(replicates, level));
     Some(ReplicateInterval {
-        percentile: at(TAILS),
+        percentile: at(tails),
         bca: acceleration
-            .and_then(|a| bca_levels(estimate, replicates, a))
+            .and_then(|a| bca_levels(estimate, replicates, a, tails))
             .map(at),
     })
 }
 
-/// The two levels of the bootstrap distribution that bound the BCa 95 % interval (Efron 1987, *JASA* 82:171; Efron &
+/// The two levels of the bootstrap distribution that bound the BCa interval whose nominal levels are `tails` (Efron 1987, *JASA* 82:171; Efron &
 /// Tibshirani 1993, equations 14.10 and 14.14).
 ///
 /// The bias correction counts replicates that tie with the estimate half. `None` where all replicates lie on one side
 /// of the estimate, so that it is not defined, or where the correction by the acceleration `a` is too large for use.
-pub fn bca_levels(estimate: f64, replicates: &[f64], a: f64) -> Option<[f64; 2]> {
+pub fn bca_levels(estimate: f64, replicates: &[f64], a: f64, tails: [f64; 2]) -> Option<[f64; 2]> {
     let normal = Normal::standard();
     let below = replicates.iter().filter(|r| **r < estimate).count() as f64;
     let ties = replicates.iter().filter(|r| **r == estimate).count() as f64;
@@ -49,12 +50,12 @@ pub fn bca_levels(estimate: f64, replicates: &[f64], a: f64) -> Option<[f64; 2]>
         return None;
     }
     let bias = normal.inverse_cdf(part);
-    let levels = TAILS.map(|tail| {
+    let levels = tails.map(|tail| {
         let z = bias + normal.inverse_cdf(tail);
         normal.cdf(bias + z / (1.0 - a * z))
     });
     // Beyond 1/a the corrected level turns back: the correction is too large to be used.
-    let usable = TAILS
+    let usable = tails
         .iter()
         .all(|tail| a * (bias + normal.inverse_cdf(*tail)) < 1.0);
     (usable && levels[0] < levels[1]).then_some(levels)
@@ -96,7 +97,7 @@ mod tests {
     fn a_symmetric_distribution_needs_no_correction() {
         let mut replicates: Vec<f64> = (0..=1000).map(f64::from).collect();
         let jackknife: Vec<f64> = (0..=20).map(f64::from).collect();
-        let found = intervals(500.0, &mut replicates, acceleration(&jackknife)).unwrap();
+        let found = intervals(500.0, &mut replicates, acceleration(&jackknife), TAILS).unwrap();
         assert_eq!(found.percentile, [25.0, 975.0]);
         let bca = found.bca.unwrap();
         assert!(
@@ -108,10 +109,10 @@ mod tests {
     #[test]
     fn an_estimate_outside_its_replicates_has_no_bca() {
         let mut replicates = [1.0, 2.0, 3.0];
-        let found = intervals(5.0, &mut replicates, Some(0.01)).unwrap();
+        let found = intervals(5.0, &mut replicates, Some(0.01), TAILS).unwrap();
         assert_eq!(found.bca, None);
-        assert!(intervals(5.0, &mut [], Some(0.0)).is_none());
-        assert!(intervals(5.0, &mut [1.0, f64::NAN], Some(0.0)).is_none());
+        assert!(intervals(5.0, &mut [], Some(0.0), TAILS).is_none());
+        assert!(intervals(5.0, &mut [1.0, f64::NAN], Some(0.0), TAILS).is_none());
         assert_eq!(acceleration(&[2.0, 2.0, 2.0]), None);
         assert_eq!(acceleration(&[]), None);
     }

@@ -15,12 +15,11 @@ use crate::curve::smoothed_hyperbola::vectorised;
 /// standard deviations, so the parameters are then within sqrt(0.001) = 0.03 standard errors.
 const PROMISE: f64 = 1e-3;
 /// What a search may leave unearned after `pass` passes. One that takes long moves along a valley, in a parameter that
-/// its resample hardly determines: the tolerance grows to a tenth and then to a fifth of a standard error.
+/// its resample hardly determines: in the end a tenth of a standard error will do.
 fn tolerance(pass: u32) -> f64 {
     match pass {
-        0..28 => PROMISE,
-        28..44 => 10.0 * PROMISE,
-        _ => 40.0 * PROMISE,
+        0..44 => PROMISE,
+        _ => 10.0 * PROMISE,
     }
 }
 
