@@ -213,12 +213,41 @@ fn coverage(
     hits
 }
 
+const CELLS: u64 = 300;
+
+fn within(what: &str, value: f64, least: f64, most: f64) {
+    assert!((least..=most).contains(&value), "{what}: {value}");
+}
+
+/// Measured over 341 cells: percentile 94.4 to 96.8 %, BCa 93.8 to 95.3 %.
 #[test]
-fn bca_intervals_cover_the_truth() {
-    let cells = std::env::var("CELLS").map_or(400, |c| c.parse().unwrap());
-    coverage(BootstrapKind::Parametric, cells, 1000, 40, 1, false);
-    coverage(BootstrapKind::Parametric, 2 * cells, 1000, 40, 1, true);
-    coverage(BootstrapKind::Cases, cells, 1000, 20, 8, true);
+fn intervals_of_determined_cells_cover_the_truth() {
+    for [percentile, bca, with] in coverage(BootstrapKind::Parametric, 2 * CELLS, 1000, 40, 1, true) {
+        within("percentile", percentile, 0.92, 0.985);
+        within("BCa", bca, 0.92, 0.97);
+        within("cells with BCa", with, 0.98, 1.0);
+    }
+}
+
+/// Cells of every kind, also such whose levels are too far apart to show their noise. Measured over 400 cells:
+/// percentile 94.3 to 95.8 %; BCa 89.5 to 92.4 %, since its corrections presume an estimate that no bound of the
+/// parameters holds.
+#[test]
+fn percentile_intervals_of_all_cells_cover_the_truth() {
+    for [percentile, bca, with] in coverage(BootstrapKind::Parametric, CELLS, 1000, 40, 1, false) {
+        within("percentile", percentile, 0.92, 0.98);
+        within("BCa", bca, 0.86, 0.97);
+        within("cells with BCa", with, 0.95, 1.0);
+    }
+}
+
+/// Eight repeats. Measured over 91 cells: 88 to 92 %; the scatter of each level is known from its own repeats alone.
+#[test]
+fn intervals_from_cases_cover_less() {
+    for [percentile, bca, _] in coverage(BootstrapKind::Cases, CELLS, 1000, 20, 8, true) {
+        within("percentile", percentile, 0.82, 0.97);
+        within("BCa", bca, 0.82, 0.97);
+    }
 }
 
 #[test]
@@ -255,4 +284,5 @@ fn a_thousand_resamples_cost_less_than_sixty_fits() {
         1e3 * resampled,
         resampled / plain
     );
+    assert!(resampled < 60.0 * plain);
 }

@@ -85,6 +85,37 @@ fn load_cell_by_statsmodels_and_in_print() {
 }
 
 #[test]
+fn silent_levels_change_no_lack_of_fit() {
+    let points: Vec<Point> = (0..24)
+        .map(|i| Point {
+            drive: f64::from(i / 3),
+            rate: f64::from(10 + i / 3 * 5 + i * i % 7),
+            se: 1.0,
+        })
+        .collect();
+    let fitted: Vec<f64> = points.iter().map(|p| 12.5 + 5.1 * p.drive).collect();
+    let silent = |drive: f64| Point {
+        drive,
+        rate: 0.0,
+        se: 0.5,
+    };
+    let mut more = vec![silent(-2.0), silent(-2.0), silent(-1.0), silent(-1.0)];
+    more.extend(&points);
+    let mut more_fitted = vec![0.0, 0.0, 0.1, 0.1];
+    more_fitted.extend(&fitted);
+    let alone = measured(&points, &fitted, 4, 2.0);
+    let with = measured(&more, &more_fitted, 4, 2.0);
+    assert!(alone.lack_of_fit_p.is_some());
+    assert_eq!(
+        (with.lack_of_fit_f, with.lack_of_fit_p),
+        (alone.lack_of_fit_f, alone.lack_of_fit_p)
+    );
+    // Where the curve fires and the cell does not, that is misfit.
+    more_fitted[..2].fill(8.0);
+    assert!(measured(&more, &more_fitted, 4, 2.0).lack_of_fit_f > alone.lack_of_fit_f);
+}
+
+#[test]
 fn puromycin_by_scipy() {
     let (_, rows) = csv("puromycin/puromycin.csv");
     for state in ["treated", "untreated"] {

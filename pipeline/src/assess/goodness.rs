@@ -147,14 +147,23 @@ pub fn set_weights(all: &mut [Goodness]) {
 
 /// F of the scatter about the curve against pure error within levels, with p; `None` without repeats or with no more
 /// levels than parameters. Sums of squares carry the weights 1/(se^2 + extra variance).
+///
+/// A level at which neither the cell nor the curve fires is left out, with its degrees of freedom: a silent step has no
+/// scatter, and counting such levels as perfect fits without error drew p away from uniform in simulated cells.
 fn lack_of_fit(fit: &FittedCurve<'_>) -> Option<(f64, f64)> {
-    let (mut pure, mut about, mut levels) = (0.0, 0.0, 0_usize);
+    let (mut pure, mut about, mut levels, mut steps) = (0.0, 0.0, 0_usize, 0_usize);
     let mut start = 0;
     while start < fit.points.len() {
         let count = fit.points[start..]
             .iter()
             .take_while(|p| p.drive == fit.points[start].drive)
             .count();
+        let silent = |p: &Point| p.rate == 0.0 && fit.fitted[start] < p.se;
+        if fit.points[start..start + count].iter().all(silent) {
+            start += count;
+            continue;
+        }
+        steps += count;
         let (mut weight, mut sum) = (0.0, 0.0);
         for p in &fit.points[start..start + count] {
             let w = 1.0 / (p.se * p.se + fit.extra_variance);
@@ -170,7 +179,7 @@ fn lack_of_fit(fit: &FittedCurve<'_>) -> Option<(f64, f64)> {
         start += count;
     }
     let between = levels.checked_sub(fit.parameters).filter(|d| *d > 0)? as f64;
-    let within = (fit.points.len() - levels) as f64;
+    let within = (steps - levels) as f64;
     if !(within > 0.0 && pure > 0.0) {
         return None;
     }

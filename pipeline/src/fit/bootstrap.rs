@@ -14,6 +14,12 @@
 //! Quantiles are taken of ln gain, 1/max rate, threshold, ln noise SD and 1/half-rise, in which an open ceiling is the
 //! ordinary value 0 and becomes an infinite bound. The acceleration of BCa comes from leaving out one point at a time.
 //!
+//! What to expect, from simulated cells of 20 to 80 steps (95 % nominal): `parametric` percentile intervals covered the
+//! truth in 94 to 96 % of all cells; BCa in 94 to 95 % of those whose levels lie close enough to show the noise and
+//! that reach half of their max rate, but in 90 to 92 % of all, since its corrections presume an estimate that no bound
+//! holds. `cases` covered 88 to 92 % with eight repeats a level and less with fewer, each level's scatter being known
+//! from its own repeats alone: prefer `parametric` unless there are many.
+//!
 //! Random numbers are those of ChaCha8, keyed by a hash of run seed, cell and response, one stream a resample: the
 //! result depends neither on the number of threads nor on the order of the work, and the first resamples of a longer
 //! run are those of a shorter one.
