@@ -105,6 +105,22 @@ pub enum FiguresName {
     None,
 }
 
+/// What a resample is drawn from, as typed.
+#[derive(Clone, Copy, Debug, ValueEnum)]
+pub enum BootstrapName {
+    /// The fitted curve and the scatter about it
+    Parametric,
+    /// The steps recorded at the same level
+    Cases,
+}
+
+fn curve_named(name: &str) -> Result<Curve, String> {
+    Curve::from_name(name).ok_or_else(|| {
+        let known: Vec<&str> = Curve::ALL.iter().map(|curve| curve.name()).collect();
+        format!("known rate functions: {}", known.join(", "))
+    })
+}
+
 /// One flag for every key of `[analysis]`.
 #[derive(Debug, Default, Args)]
 #[command(next_help_heading = "Analysis settings (also keys of [analysis] in recording.toml)")]
@@ -166,6 +182,45 @@ pub struct SettingArguments {
     /// Mean intervals of silence at the end of a step above which stops-early is flagged [default: 5]
     #[arg(long, value_name = "X")]
     pub stop_intervals: Option<f64>,
+    /// Change of the rate over the repeats, as a fraction, above which drift is flagged [default: 0.1]
+    #[arg(long, value_name = "X")]
+    pub drift_fraction: Option<f64>,
+    /// p of no drift below which it is believed [default: 0.01]
+    #[arg(long, value_name = "P")]
+    pub drift_p: Option<f64>,
+    /// Lack-of-fit p below which lack-of-fit is flagged [default: 0.01]
+    #[arg(long, value_name = "P")]
+    pub lack_of_fit_p: Option<f64>,
+    /// AICc by which another rate function must be better to be flagged [default: 10]
+    #[arg(long, value_name = "X")]
+    pub rival_aicc: Option<f64>,
+    /// Standard errors by which a level must fall below a smaller drive's to be flagged non-monotone [default: 4]
+    #[arg(long, value_name = "X")]
+    pub non_monotone_se: Option<f64>,
+    /// Duplicate spike times above which duplicates-dropped is flagged [default: 0]
+    #[arg(long, value_name = "N")]
+    pub duplicate_spikes: Option<usize>,
+    /// Steps the robust fit may cut to less than half their weight without a flag [default: 0]
+    #[arg(long, value_name = "N")]
+    pub down_weighted_steps: Option<usize>,
+    /// Rate functions to fit beside the smoothed hyperbola, comma separated [default: all eight]
+    #[arg(long, value_delimiter = ',', value_name = "LIST", value_parser = curve_named)]
+    pub curves: Option<Vec<Curve>>,
+    /// Do not predict each level from the fit without it
+    #[arg(long)]
+    pub no_leave_one_out: bool,
+    /// Resamples of a bootstrap beside the profile intervals [default: 0, none]
+    #[arg(long, value_name = "N")]
+    pub bootstrap: Option<usize>,
+    /// What a resample is drawn from [default: parametric]
+    #[arg(long, value_enum, value_name = "KIND")]
+    pub bootstrap_kind: Option<BootstrapName>,
+    /// Seed of all random numbers [default: 1]
+    #[arg(long, value_name = "N")]
+    pub seed: Option<u64>,
+    /// Give steps far from the curve less weight (Tukey's biweight)
+    #[arg(long)]
+    pub robust: bool,
     /// Drives in the grid of curves.parquet [default: 101]
     #[arg(long, value_name = "N")]
     pub curve_points: Option<usize>,
@@ -219,5 +274,25 @@ impl SettingArguments {
         set(&mut analysis.irregular_cv, self.irregular_cv);
         set(&mut analysis.stop_intervals, self.stop_intervals);
         set(&mut analysis.curve_points, self.curve_points);
+        set(&mut analysis.drift_fraction, self.drift_fraction);
+        set(&mut analysis.drift_p, self.drift_p);
+        set(&mut analysis.lack_of_fit_p, self.lack_of_fit_p);
+        set(&mut analysis.rival_aicc, self.rival_aicc);
+        set(&mut analysis.non_monotone_se, self.non_monotone_se);
+        set(&mut analysis.duplicate_spikes, self.duplicate_spikes);
+        set(&mut analysis.down_weighted_steps, self.down_weighted_steps);
+        if let Some(curves) = &self.curves {
+            analysis.curves.clone_from(curves);
+        }
+        analysis.leave_one_out &= !self.no_leave_one_out;
+        set(&mut analysis.bootstrap, self.bootstrap);
+        if let Some(kind) = self.bootstrap_kind {
+            analysis.bootstrap_kind = match kind {
+                BootstrapName::Parametric => BootstrapKind::Parametric,
+                BootstrapName::Cases => BootstrapKind::Cases,
+            };
+        }
+        set(&mut analysis.seed, self.seed);
+        analysis.robust |= self.robust;
     }
 }

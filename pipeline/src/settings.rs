@@ -4,6 +4,8 @@
 use serde::de::Visitor;
 use serde::{Deserialize, Deserializer, Serialize};
 
+use crate::curve::Curve;
+use crate::fit::BootstrapKind;
 use crate::rates::Response;
 
 /// Which cells get a figure of their own. Contact sheets and the other figures of the set show all cells.
@@ -84,6 +86,32 @@ pub struct Analysis {
     /// Part of a step that may pass in silence after its last spike, as a multiple of the mean interval, before firing
     /// counts as stopped (flag `stops-early`).
     pub stop_intervals: f64,
+    /// Change of the rate over the recording, as a fraction of the mean rate, above which repeats drift (flag `drift`).
+    pub drift_fraction: f64,
+    /// p of no drift below which such a change is believed.
+    pub drift_p: f64,
+    /// Lack-of-fit p below which the curve misses the level means (flag `lack-of-fit`).
+    pub lack_of_fit_p: f64,
+    /// AICc by which another rate function must be better (flag `rival-better`).
+    pub rival_aicc: f64,
+    /// Standard errors by which a level's mean rate must fall below that of a smaller drive (flag `non-monotone`).
+    pub non_monotone_se: f64,
+    /// Duplicate spike times dropped above which a cell is flagged (flag `duplicates-dropped`).
+    pub duplicate_spikes: usize,
+    /// Steps that the robust fit may cut to less than half of their weight without a flag (flag `down-weighted`).
+    pub down_weighted_steps: usize,
+    /// Rate functions fitted to every cell; the smoothed hyperbola always is.
+    pub curves: Vec<Curve>,
+    /// Whether every level is also predicted from the fit without it, for each rate function.
+    pub leave_one_out: bool,
+    /// Resamples of the bootstrap; 0 is none.
+    pub bootstrap: usize,
+    /// How the rates of a resample are drawn.
+    pub bootstrap_kind: BootstrapKind,
+    /// Seed of all random numbers, together with each cell's name.
+    pub seed: u64,
+    /// Whether steps far from the curve lose weight (Tukey's biweight).
+    pub robust: bool,
     /// Number of drives in the grid of `curves.parquet`, per cell and response.
     pub curve_points: usize,
 }
@@ -109,6 +137,19 @@ impl Default for Analysis {
             adaptation_fraction: 0.5,
             irregular_cv: 1.0,
             stop_intervals: 5.0,
+            drift_fraction: 0.1,
+            drift_p: 0.01,
+            lack_of_fit_p: 0.01,
+            rival_aicc: 10.0,
+            non_monotone_se: 4.0,
+            duplicate_spikes: 0,
+            down_weighted_steps: 0,
+            curves: Curve::ALL.to_vec(),
+            leave_one_out: true,
+            bootstrap: 0,
+            bootstrap_kind: BootstrapKind::Parametric,
+            seed: 1,
+            robust: false,
             curve_points: 101,
         }
     }
@@ -175,14 +216,53 @@ impl Analysis {
             ("adaptation_fraction", self.adaptation_fraction),
             ("irregular_cv", self.irregular_cv),
             ("stop_intervals", self.stop_intervals),
+            ("drift_fraction", self.drift_fraction),
+            ("rival_aicc", self.rival_aicc),
+            ("non_monotone_se", self.non_monotone_se),
         ] {
             if !(value >= 0.0 && value.is_finite()) {
                 return err(key, value.to_string(), "0 or more, finite");
             }
         }
+        for (key, value) in [("drift_p", self.drift_p), ("lack_of_fit_p", self.lack_of_fit_p)] {
+            if !(0.0..=1.0).contains(&value) {
+                return err(key, value.to_string(), "[0, 1]");
+            }
+        }
+        if self.bootstrap > 0 && !(100..=1_000_000).contains(&self.bootstrap) {
+            return err(
+                "bootstrap",
+                self.bootstrap.to_string(),
+                "0 (none) or 100 to 1000000",
+            );
+        }
+        if self.curves.is_empty() {
+            return err("curves", "[]".into(), "at least one rate function");
+        }
         if !(2..=10_001).contains(&self.curve_points) {
             return err("curve_points", self.curve_points.to_string(), "2 to 10001");
         }
         Ok(())
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    #![allow(clippy::unwrap_used)]
+    use super::*;
+
+    #[test]
+    fn defaults_are_valid_and_limits_out_of_range_are_named() {
+        assert_eq!(Analysis::default().validate(), Ok(()));
+        let refused = |change: fn(&mut Analysis)| {
+            let mut settings = Analysis::default();
+            change(&mut settings);
+            settings.validate().unwrap_err().key
+        };
+        assert_eq!(refused(|s| s.drift_fraction = -0.1), "drift_fraction");
+        assert_eq!(refused(|s| s.drift_p = 1.5), "drift_p");
+        assert_eq!(refused(|s| s.lack_of_fit_p = f64::NAN), "lack_of_fit_p");
+        assert_eq!(refused(|s| s.rival_aicc = f64::INFINITY), "rival_aicc");
+        assert_eq!(refused(|s| s.non_monotone_se = -1.0), "non_monotone_se");
     }
 }

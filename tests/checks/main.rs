@@ -4,7 +4,9 @@
 // `!(error <= limit)` is meant: it also catches what is not a number.
 #![allow(clippy::neg_cmp_op_on_partial_ord)]
 
+mod bootstrap;
 mod extra_variance;
+mod goodness;
 mod hyperbola;
 mod integrate_and_fire;
 mod intervals;

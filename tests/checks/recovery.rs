@@ -88,6 +88,7 @@ fn cell(seed: u64, without_ceiling: bool) -> (CellRecording, Truth) {
         sweeps,
         steps,
         spikes_s: spikes,
+        duplicate_spikes: 0,
         refusal: None,
     };
     (recording, truth)

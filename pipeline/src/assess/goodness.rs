@@ -4,6 +4,7 @@ use statrs::distribution::{ContinuousCDF, FisherSnedecor};
 use statrs::function::factorial::ln_binomial;
 
 use super::Goodness;
+use crate::curve::Curve;
 use crate::fit::Point;
 
 /// A fitted curve as the measures need it. All slices run over the points, sorted by drive.
@@ -17,9 +18,8 @@ pub struct FittedCurve<'a> {
     pub points: &'a [Point],
     /// Fitted rate at each point, Hz.
     pub fitted: &'a [f64],
-    /// Share of its level's own weight in each point's fitted value (leverage of the level), 0 to 1; empty where the
-    /// covariance is not known.
-    pub leverage: &'a [f64],
+    /// Rate of each point predicted by the fit without its level, Hz; `None` where not computed or a refit failed.
+    pub left_out: Option<&'a [f64]>,
     /// Extra variance, Hz^2.
     pub extra_variance: f64,
     /// Whether the search converged.
@@ -48,9 +48,15 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
         runs_p: None,
         loo_rmse_hz: None,
         converged: fit.converged,
+        reason: "fitted".into(),
         evaluations: fit.evaluations,
     };
-    if !fit.converged || n <= fit.parameters {
+    if !fit.converged {
+        out.reason = "the search for the best curve did not settle".into();
+        return out;
+    }
+    if n <= fit.parameters {
+        out.reason = format!("{n} steps are too few to measure a fit of {} parameters", fit.parameters);
         return out;
     }
     let residuals: Vec<f64> = fit
@@ -81,8 +87,40 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
         out.lack_of_fit_p = Some(p);
     }
     out.runs_p = runs_p(&residuals);
-    out.loo_rmse_hz = leave_one_level_out(fit, &residuals);
+    out.loo_rmse_hz = fit.left_out.and_then(|predicted| {
+        let sum: f64 = fit
+            .points
+            .iter()
+            .zip(predicted)
+            .map(|(p, f)| (p.rate - f).powi(2))
+            .sum();
+        let rmse = (sum / n as f64).sqrt();
+        (predicted.len() == n && rmse.is_finite()).then_some(rmse)
+    });
     out
+}
+
+/// The row of a rate function that could not be fitted to `steps` steps, with the reason.
+pub fn not_fitted(curve: Curve, steps: usize, reason: &str) -> Goodness {
+    Goodness {
+        curve: curve.name(),
+        parameters: curve.parameters(),
+        steps,
+        log_likelihood: None,
+        aicc: None,
+        aicc_weight: None,
+        bic: None,
+        rmse_hz: None,
+        r2: None,
+        reduced_chi2: None,
+        lack_of_fit_f: None,
+        lack_of_fit_p: None,
+        runs_p: None,
+        loo_rmse_hz: None,
+        converged: false,
+        reason: reason.into(),
+        evaluations: 0,
+    }
 }
 
 /// Gaussian log-likelihood of the residuals with variances se^2 + v, v >= 0 set where it is largest.
@@ -147,14 +185,23 @@ pub fn set_weights(all: &mut [Goodness]) {
 
 /// F of the scatter about the curve against pure error within levels, with p; `None` without repeats or with no more
 /// levels than parameters. Sums of squares carry the weights 1/(se^2 + extra variance).
+///
+/// A level at which neither the cell nor the curve fires is left out, with its degrees of freedom: a silent step has no
+/// scatter, and counting such levels as perfect fits without error drew p away from uniform in simulated cells.
 fn lack_of_fit(fit: &FittedCurve<'_>) -> Option<(f64, f64)> {
-    let (mut pure, mut about, mut levels) = (0.0, 0.0, 0_usize);
+    let (mut pure, mut about, mut levels, mut steps) = (0.0, 0.0, 0_usize, 0_usize);
     let mut start = 0;
     while start < fit.points.len() {
         let count = fit.points[start..]
             .iter()
             .take_while(|p| p.drive == fit.points[start].drive)
             .count();
+        let silent = |p: &Point| p.rate == 0.0 && fit.fitted[start] < p.se;
+        if fit.points[start..start + count].iter().all(silent) {
+            start += count;
+            continue;
+        }
+        steps += count;
         let (mut weight, mut sum) = (0.0, 0.0);
         for p in &fit.points[start..start + count] {
             let w = 1.0 / (p.se * p.se + fit.extra_variance);
@@ -170,7 +217,7 @@ fn lack_of_fit(fit: &FittedCurve<'_>) -> Option<(f64, f64)> {
         start += count;
     }
     let between = levels.checked_sub(fit.parameters).filter(|d| *d > 0)? as f64;
-    let within = (fit.points.len() - levels) as f64;
+    let within = (steps - levels) as f64;
     if !(within > 0.0 && pure > 0.0) {
         return None;
     }
@@ -214,39 +261,6 @@ pub fn runs_p(residuals: &[f64]) -> Option<f64> {
     let few: f64 = (2..=runs).map(probability).sum();
     let many: f64 = (runs..=up + down).map(probability).sum();
     Some((2.0 * few.min(many)).min(1.0))
-}
-
-/// RMSE of every step predicted from the fit without its level, by one linear step at the estimate: the mean residual
-/// of a level grows by 1/(1 - leverage) when the level is left out.
-fn leave_one_level_out(fit: &FittedCurve<'_>, residuals: &[f64]) -> Option<f64> {
-    if fit.leverage.len() != residuals.len() {
-        return None;
-    }
-    let mut sum = 0.0;
-    let mut start = 0;
-    while start < residuals.len() {
-        let count = fit.points[start..]
-            .iter()
-            .take_while(|p| p.drive == fit.points[start].drive)
-            .count();
-        let (mut weight, mut mean) = (0.0, 0.0);
-        for i in start..start + count {
-            let w = 1.0 / (fit.points[i].se.powi(2) + fit.extra_variance);
-            weight += w;
-            mean += w * residuals[i];
-        }
-        mean /= weight;
-        let leverage = fit.leverage[start];
-        // A level that alone decides a parameter cannot be predicted from the others.
-        if !(leverage < 1.0 - 1e-9) {
-            return None;
-        }
-        for r in &residuals[start..start + count] {
-            sum += (r - mean + mean / (1.0 - leverage)).powi(2);
-        }
-        start += count;
-    }
-    Some((sum / residuals.len() as f64).sqrt())
 }
 
 #[cfg(test)]

@@ -2,10 +2,14 @@
 
 pub mod flags;
 pub mod goodness;
+pub mod repeats;
 pub mod verdict;
 
 use std::sync::Arc;
 
+use repeats::Repeats;
+
+use crate::fit::Bootstrap;
 pub use crate::fit::Estimate;
 use crate::rates::{Response, StepRate};
 use crate::recording::{CellId, DriveKind, ProtocolStep};
@@ -139,6 +143,8 @@ pub struct Goodness {
     pub loo_rmse_hz: Option<f64>,
     /// Whether the solver converged.
     pub converged: bool,
+    /// `fitted`, or why the curve has no fit.
+    pub reason: String,
     /// Evaluations of the curve over all points.
     pub evaluations: u64,
 }
@@ -212,6 +218,10 @@ pub struct ResponseResult {
     pub covariance: Option<[f64; 16]>,
     /// One entry per rate function tried.
     pub goodness: Vec<Goodness>,
+    /// Bootstrap intervals, where asked for.
+    pub bootstrap: Option<Bootstrap>,
+    /// What repeated levels say.
+    pub repeats: Option<Repeats>,
     /// Fitted rate and band on a grid of drives; empty without a fit.
     pub curve: Vec<CurvePoint>,
     /// The other rate functions on the same grid; empty where none was fitted or none is to be drawn.

@@ -5,20 +5,21 @@ use crate::settings::Analysis;
 
 /// Mean rate of one level and its standard error, Hz.
 #[derive(Clone, Copy, Debug, PartialEq)]
-struct LevelMean {
-    drive: f64,
-    rate: f64,
-    se: f64,
+pub(super) struct LevelMean {
+    pub(super) drive: f64,
+    pub(super) rate: f64,
+    pub(super) se: f64,
 }
 
 /// Median of a squared standard normal, which turns a median of squares into a variance.
 const MEDIAN_CHI2: f64 = 0.454_936_423_119_572_8;
 
-/// Level means with standard errors that hold the scatter between steps as well as interval noise.
+/// Level means with standard errors that hold the scatter between steps as well as interval noise; without
+/// `with_scatter`, what the points' standard errors say alone.
 ///
 /// The scatter is read off the second differences of neighbouring level means, whose variance is six times that of a
 /// mean when the curve is smooth; taking their median keeps a real fall of the rate out of it.
-fn level_means(points: &[Point]) -> Vec<LevelMean> {
+pub(super) fn level_means(points: &[Point], with_scatter: bool) -> Vec<LevelMean> {
     let mut means: Vec<(LevelMean, f64)> = Vec::new();
     let mut i = 0;
     while i < points.len() {
@@ -52,7 +53,8 @@ fn level_means(points: &[Point]) -> Vec<LevelMean> {
         })
         .collect();
     excess.sort_by(f64::total_cmp);
-    let scatter = excess.get(excess.len() / 2).copied().unwrap_or(0.0).max(0.0);
+    let median = excess.get(excess.len() / 2).filter(|_| with_scatter);
+    let scatter = median.copied().unwrap_or(0.0).max(0.0);
     means
         .into_iter()
         .map(|(m, _)| LevelMean {
@@ -75,7 +77,7 @@ pub struct Decline {
 /// more than `declining_se` standard errors on at least two levels, or below `declining_last_fraction` of it on the
 /// last. `points` are sorted by drive.
 pub fn decline(points: &[Point], settings: &Analysis) -> Option<Decline> {
-    let means = level_means(points);
+    let means = level_means(points, true);
     let peak_at = means
         .iter()
         .enumerate()
@@ -105,7 +107,10 @@ pub fn decline(points: &[Point], settings: &Analysis) -> Option<Decline> {
 
 /// Largest mean rate over the levels of `points` (sorted by drive), Hz.
 pub fn peak_rate(points: &[Point]) -> Option<f64> {
-    level_means(points).iter().map(|m| m.rate).max_by(f64::total_cmp)
+    level_means(points, true)
+        .iter()
+        .map(|m| m.rate)
+        .max_by(f64::total_cmp)
 }
 
 #[cfg(test)]

@@ -1,5 +1,7 @@
 //! From rates to a rate function: objective, solver, extra SD, profiles.
 
+pub mod bootstrap;
+pub mod bootstrap_interval;
 mod estimates;
 mod extra_sd;
 pub mod hyperbola_fit;
@@ -7,13 +9,17 @@ pub mod leave_one_out;
 pub mod main_fit;
 pub mod objective;
 mod profile;
+mod resample_fit;
 pub mod rival_fit;
+pub mod robust;
 pub mod solver;
 mod starts;
 
+pub use bootstrap::{Bootstrap, BootstrapInterval, BootstrapKind, BootstrapSettings, bootstrap};
 pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
 pub use objective::Point;
 pub use profile::{Side, SideSearch};
 pub use rival_fit::{NoRival, RivalFit, fit_rival};
+pub use robust::{Robust, robust};

@@ -226,6 +226,7 @@ fn empty_cells(tables: &mut Tables, order: &[u32], place: &[u32]) -> Vec<CellRec
             sweeps: Vec::new(),
             steps: Vec::new(),
             spikes_s: Vec::new(),
+            duplicate_spikes: 0,
             refusal: None,
         })
         .collect();
@@ -641,6 +642,7 @@ fn refuse_repeats(
             }
             sweep.spikes = start..kept.len();
         }
+        cell.duplicate_spikes = cell.spikes_s.len() - kept.len();
         cell.spikes_s = kept;
     }
 }

@@ -117,6 +117,8 @@ pub struct CellRecording {
     pub steps: Vec<ProtocolStep>,
     /// All accepted spike times in seconds, sweep by sweep, ascending within a sweep.
     pub spikes_s: Vec<f64>,
+    /// Spikes refused because an earlier row has the same time.
+    pub duplicate_spikes: usize,
     /// Set when the whole cell is refused; its rows are then in the refused table.
     pub refusal: Option<CellRefusal>,
 }

@@ -62,6 +62,7 @@ mod tests {
                 .collect(),
             steps,
             spikes_s,
+            duplicate_spikes: 0,
             refusal: None,
         }
     }

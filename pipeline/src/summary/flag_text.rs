@@ -21,6 +21,12 @@ pub(super) fn flag_meaning(flag: &str) -> Option<&'static str> {
         "strong-adaptation" => "the rate falls strongly within the step",
         "irregular" => "intervals scatter as those of a random process do, or more",
         "spikes-outside" => "many spikes outside all steps: the cell fires on its own",
+        "drift" => "the rate of repeated steps changed over the recording",
+        "lack-of-fit" => "the level means miss the curve by more than repeats scatter",
+        "rival-better" => "another rate function describes the cell far better",
+        "non-monotone" => "the rate of a level falls below that of a smaller drive",
+        "duplicates-dropped" => "spike times that were there more than once were counted once",
+        "down-weighted" => "the robust fit gives some steps less than half of their weight",
         _ => return None,
     })
 }

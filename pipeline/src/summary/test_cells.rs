@@ -176,6 +176,8 @@ fn response(response: Response, verdict: Ceiling, drives: &[f64], size: f64) -> 
         usable: matches!(verdict, Ceiling::Resolved | Ceiling::Loose),
         flags: Vec::new(),
         covariance: None,
+        bootstrap: None,
+        repeats: None,
         goodness: Vec::new(),
         curve,
         rivals: Vec::new(),
@@ -231,6 +233,7 @@ pub(super) fn set(name: &str, cells: &[CellResult]) -> RecordingSet {
                 sweeps: Vec::new(),
                 steps: cell.steps.clone(),
                 spikes_s: vec![0.1; 10],
+                duplicate_spikes: 0,
                 refusal: None,
             })
             .collect(),

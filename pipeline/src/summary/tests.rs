@@ -703,12 +703,13 @@ fn rivals_are_drawn_on_demand_with_their_weights() {
         lack_of_fit_p: None,
         runs_p: None,
         loo_rmse_hz: None,
+        reason: "fitted".into(),
         converged: true,
         evaluations: 1,
     };
     let first = &mut both.responses[0];
     first.goodness = vec![
-        goodness(crate::curve::SMOOTHED_HYPERBOLA, Some(0.7)),
+        goodness(crate::curve::Curve::SmoothedHyperbola.name(), Some(0.7)),
         goodness("ramp", Some(1e-9)),
         goodness("logistic", Some(0.3)),
     ];

@@ -15,6 +15,8 @@ pub struct TableContext {
     pub carried_columns: Vec<String>,
     /// Only `steps.parquet` and `refused.parquet`, without the columns that need a fit.
     pub rates_only: bool,
+    /// Whether bootstrap intervals are written.
+    pub bootstrap: bool,
 }
 
 impl TableContext {
@@ -70,6 +72,8 @@ pub(super) enum When {
     Kind(DriveKind),
     /// Those that are fitted.
     Fitted,
+    /// Those with bootstrap intervals.
+    Bootstrap,
 }
 
 impl When {
@@ -78,6 +82,7 @@ impl When {
             Self::Always => true,
             Self::Kind(kind) => context.has(kind),
             Self::Fitted => !context.rates_only,
+            Self::Bootstrap => context.bootstrap,
         }
     }
 }

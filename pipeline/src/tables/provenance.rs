@@ -141,7 +141,7 @@ impl Provenance {
                 cells: set.cell_rows,
             },
             counts,
-            seed: None,
+            seed: (settings.bootstrap > 0).then_some(settings.seed),
             tables,
         }
     }

@@ -4,6 +4,7 @@ use std::sync::Arc;
 
 use super::columns::{Column as C, Table, Unit, When};
 use crate::assess::{Ceiling, CellResult, CurvePoint, Flag, Goodness, ResponseResult};
+use crate::fit::{Bootstrap, BootstrapInterval};
 use crate::rates::StepRate;
 use crate::recording::{DriveKind, ProtocolStep, RefusedRow};
 
@@ -19,6 +20,8 @@ const RESPONSE: &str = "Part of the step that the rate describes: whole, steady 
 const SE: &str = "Standard error (delta method); null: not estimated";
 const LO: &str = "Lower bound of the 95 % profile interval; -inf: open; null: not estimated";
 const HI: &str = "Upper bound of the 95 % profile interval; inf: open; null: not estimated";
+const PERCENTILE: &str = "End of the 95 % percentile interval of the bootstrap; infinite: open";
+const BCA: &str = "End of the 95 % BCa interval of the bootstrap (Efron 1987); infinite: open; null: not estimated";
 const V_THRESHOLD: &str =
     "Effective threshold potential of the cell under conductance; not estimated yet by this version";
 
@@ -29,6 +32,12 @@ pub(super) struct Parameters;
 pub(super) struct ResponseRow<'a> {
     pub(super) cell: &'a CellResult,
     pub(super) response: &'a ResponseResult,
+}
+
+impl ResponseRow<'_> {
+    fn boot(&self, of: impl Fn(&Bootstrap) -> BootstrapInterval) -> Option<BootstrapInterval> {
+        self.response.bootstrap.as_ref().map(of)
+    }
 }
 
 impl Table for Parameters {
@@ -74,8 +83,34 @@ impl Table for Parameters {
         C::<Self>::real("v_threshold_mV_se", MILLIVOLT, "Standard error of v_threshold_mV; not estimated yet by this version", |_| None).when(When::Kind(DriveKind::Conductance)),
         C::<Self>::real("v_threshold_mV_lo", MILLIVOLT, "Lower 95 % bound of v_threshold_mV; not estimated yet by this version", |_| None).when(When::Kind(DriveKind::Conductance)),
         C::<Self>::real("v_threshold_mV_hi", MILLIVOLT, "Upper 95 % bound of v_threshold_mV; not estimated yet by this version", |_| None).when(When::Kind(DriveKind::Conductance)),
+        C::<Self>::real("max_rate_Hz_percentile_lo", HZ, PERCENTILE, |r| r.boot(|b| b.max_rate).map(|i| i.percentile[0])).when(When::Bootstrap),
+        C::<Self>::real("max_rate_Hz_percentile_hi", HZ, PERCENTILE, |r| r.boot(|b| b.max_rate).map(|i| i.percentile[1])).when(When::Bootstrap),
+        C::<Self>::real("max_rate_Hz_bca_lo", HZ, BCA, |r| r.boot(|b| b.max_rate).and_then(|i| i.bca).map(|i| i[0])).when(When::Bootstrap),
+        C::<Self>::real("max_rate_Hz_bca_hi", HZ, BCA, |r| r.boot(|b| b.max_rate).and_then(|i| i.bca).map(|i| i[1])).when(When::Bootstrap),
+        C::<Self>::real("half_rise_percentile_lo", Unit::Drive, PERCENTILE, |r| r.boot(|b| b.half_rise).map(|i| i.percentile[0])).when(When::Bootstrap),
+        C::<Self>::real("half_rise_percentile_hi", Unit::Drive, PERCENTILE, |r| r.boot(|b| b.half_rise).map(|i| i.percentile[1])).when(When::Bootstrap),
+        C::<Self>::real("half_rise_bca_lo", Unit::Drive, BCA, |r| r.boot(|b| b.half_rise).and_then(|i| i.bca).map(|i| i[0])).when(When::Bootstrap),
+        C::<Self>::real("half_rise_bca_hi", Unit::Drive, BCA, |r| r.boot(|b| b.half_rise).and_then(|i| i.bca).map(|i| i[1])).when(When::Bootstrap),
+        C::<Self>::real("threshold_percentile_lo", Unit::Drive, PERCENTILE, |r| r.boot(|b| b.threshold).map(|i| i.percentile[0])).when(When::Bootstrap),
+        C::<Self>::real("threshold_percentile_hi", Unit::Drive, PERCENTILE, |r| r.boot(|b| b.threshold).map(|i| i.percentile[1])).when(When::Bootstrap),
+        C::<Self>::real("threshold_bca_lo", Unit::Drive, BCA, |r| r.boot(|b| b.threshold).and_then(|i| i.bca).map(|i| i[0])).when(When::Bootstrap),
+        C::<Self>::real("threshold_bca_hi", Unit::Drive, BCA, |r| r.boot(|b| b.threshold).and_then(|i| i.bca).map(|i| i[1])).when(When::Bootstrap),
+        C::<Self>::real("noise_sd_percentile_lo", Unit::Drive, PERCENTILE, |r| r.boot(|b| b.noise_sd).map(|i| i.percentile[0])).when(When::Bootstrap),
+        C::<Self>::real("noise_sd_percentile_hi", Unit::Drive, PERCENTILE, |r| r.boot(|b| b.noise_sd).map(|i| i.percentile[1])).when(When::Bootstrap),
+        C::<Self>::real("noise_sd_bca_lo", Unit::Drive, BCA, |r| r.boot(|b| b.noise_sd).and_then(|i| i.bca).map(|i| i[0])).when(When::Bootstrap),
+        C::<Self>::real("noise_sd_bca_hi", Unit::Drive, BCA, |r| r.boot(|b| b.noise_sd).and_then(|i| i.bca).map(|i| i[1])).when(When::Bootstrap),
+        C::<Self>::real("initial_gain_percentile_lo", Unit::HzPerDrive, PERCENTILE, |r| r.boot(|b| b.initial_gain).map(|i| i.percentile[0])).when(When::Bootstrap),
+        C::<Self>::real("initial_gain_percentile_hi", Unit::HzPerDrive, PERCENTILE, |r| r.boot(|b| b.initial_gain).map(|i| i.percentile[1])).when(When::Bootstrap),
+        C::<Self>::real("initial_gain_bca_lo", Unit::HzPerDrive, BCA, |r| r.boot(|b| b.initial_gain).and_then(|i| i.bca).map(|i| i[0])).when(When::Bootstrap),
+        C::<Self>::real("initial_gain_bca_hi", Unit::HzPerDrive, BCA, |r| r.boot(|b| b.initial_gain).and_then(|i| i.bca).map(|i| i[1])).when(When::Bootstrap),
+        C::<Self>::real("resamples", Unit::One, "Resamples of the bootstrap; null: no bootstrap for this row", |r| r.response.bootstrap.as_ref().map(|b| b.resamples as f64)).when(When::Bootstrap),
+        C::<Self>::real("resamples_failed", Unit::One, "Resamples whose fit did not converge, left out of the intervals", |r| r.response.bootstrap.as_ref().map(|b| b.failed as f64)).when(When::Bootstrap),
         C::real("reached", Unit::One, "Fitted rate at the largest drive used over max rate", |r| r.response.reached),
         C::real("extra_sd_Hz", HZ, "Extra SD: standard deviation between steps beyond interval noise", |r| r.response.extra_sd_hz),
+        C::real("between_sd_Hz", HZ, "Part of the extra SD between repeats of a level; null where none repeats", |r| r.response.repeats.and_then(|x| x.between_sd_hz)),
+        C::real("misfit_sd_Hz", HZ, "Part of the extra SD that repeats do not explain: level means about the curve", |r| r.response.repeats.and_then(|x| x.misfit_sd_hz)),
+        C::real("drift_percent", Unit::Of("%"), "Change of the rate from the first repeat presented to the last, per cent of the mean rate", |r| r.response.repeats.and_then(|x| x.drift_percent)),
+        C::real("drift_p", Unit::One, "Two-sided p-value of no drift", |r| r.response.repeats.and_then(|x| x.drift_p)),
         C::real("interval_cv", Unit::One, "Coefficient of variation of the cell's intervals on which the standard errors of its rates rest", |r| r.response.interval_cv),
         C::text("ceiling", "Verdict on the maximum: resolved, loose, open, declining or silent", |r| r.response.ceiling.map(Ceiling::name)),
         C::truth("usable", "Converged, ceiling resolved or loose, and no flag of severity reject", |r| r.response.usable),
@@ -120,6 +155,7 @@ impl Table for GoodnessTable {
         C::real("runs_p", Unit::One, "Two-sided p-value of the runs test of residual signs by drive", |r| r.goodness.runs_p),
         C::real("loo_rmse_Hz", HZ, "Root mean square error with one level left out at a time", |r| r.goodness.loo_rmse_hz),
         C::truth("converged", "Whether the solver converged", |r| r.goodness.converged),
+        C::text("reason", "fitted, or why the rate function has no fit", |r| Some(&r.goodness.reason)),
         C::count("evaluations", "Evaluations of the rate function over all steps", |r| r.goodness.evaluations),
     ];
 }

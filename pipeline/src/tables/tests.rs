@@ -70,6 +70,7 @@ fn goodness(curve: &'static str) -> Goodness {
         lack_of_fit_p: None,
         runs_p: Some(0.5),
         loo_rmse_hz: Some(1.3),
+        reason: "fitted".into(),
         converged: true,
         evaluations: 431,
     }
@@ -114,6 +115,8 @@ fn fitted(response: Response) -> ResponseResult {
         usable: false,
         flags: vec![flag("rate-drift"), flag("few-levels")],
         covariance: Some(covariance),
+        bootstrap: None,
+        repeats: None,
         goodness: vec![goodness("smoothed-hyperbola"), goodness("smoothed-ramp")],
         curve: vec![
             CurvePoint {
@@ -152,6 +155,10 @@ fn refused(response: Response) -> ResponseResult {
         ceiling: None,
         flags: vec![],
         covariance: None,
+        bootstrap: None,
+        repeats: None,
+        bootstrap: None,
+        repeats: None,
         goodness: vec![],
         curve: vec![],
         rates: vec![],
@@ -198,6 +205,7 @@ fn context(kinds: &[DriveKind]) -> TableContext {
         drive_kinds: kinds.to_vec(),
         carried_columns: vec!["layer".into(), "status".into()],
         rates_only: false,
+        bootstrap: false,
     }
 }
 
@@ -595,6 +603,7 @@ fn rates_alone_have_two_tables_without_fitted_columns() {
     let dir = tempfile::tempdir().unwrap();
     let context = TableContext {
         rates_only: true,
+        bootstrap: false,
         ..context(&BOTH[..1])
     };
     let written = write_all(dir.path(), &context, &mixed()[..1]);

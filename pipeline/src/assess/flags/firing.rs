@@ -106,9 +106,10 @@ pub(super) fn stops_early(e: &Evidence<'_>) -> Option<Flag> {
         longest,
         e.settings.stop_intervals,
         format!(
-            "in {} steps firing stopped before half time; their interval rate tells of the burst, not of the step \
+            "in {} {} firing stopped before half time; the interval rate tells of the burst, not of the step \
              (the steady response shows it)",
-            steps.len()
+            steps.len(),
+            if steps.len() == 1 { "step" } else { "steps" }
         ),
     )
 }
@@ -173,5 +174,24 @@ pub(super) fn spikes_outside(e: &Evidence<'_>) -> Option<Flag> {
              the protocol is shifted",
             100.0 * fraction
         ),
+    )
+}
+
+pub(super) fn duplicates_dropped(e: &Evidence<'_>) -> Option<Flag> {
+    let dropped = e.duplicate_spikes;
+    if dropped <= e.settings.duplicate_spikes {
+        return None;
+    }
+    let spikes = if dropped == 1 {
+        "1 spike time was there twice and is".to_owned()
+    } else {
+        format!("{dropped} spike times were there more than once and are")
+    };
+    flag(
+        "duplicates-dropped",
+        Severity::Note,
+        dropped as f64,
+        e.settings.duplicate_spikes as f64,
+        format!("{spikes} counted once: look at the spike detection or the export"),
     )
 }

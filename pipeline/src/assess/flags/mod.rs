@@ -4,8 +4,12 @@
 mod firing;
 mod fit;
 mod levels;
+mod rivals;
+#[cfg(test)]
+mod tests;
 
-use super::{Ceiling, Flag, Severity, Status};
+use super::repeats::Repeats;
+use super::{Ceiling, Flag, Goodness, Severity, Status};
 use crate::fit::Estimates;
 use crate::rates::{CellCv, Response, StepRate};
 use crate::recording::ProtocolStep;
@@ -36,6 +40,14 @@ pub struct Evidence<'a> {
     pub estimates: Option<&'a Estimates>,
     /// Distinct drives used.
     pub levels: usize,
+    /// Goodness of fit of every rate function tried, the main one first; empty without a fit.
+    pub goodness: &'a [Goodness],
+    /// What repeated levels say; `None` where none repeats or there is no fit.
+    pub repeats: Option<Repeats>,
+    /// Duplicate spike times of the cell that were dropped on reading.
+    pub duplicate_spikes: usize,
+    /// Steps whose weight the robust fit has cut to less than half, as places in `steps`.
+    pub down_weighted: &'a [usize],
     /// Settings with the limits.
     pub settings: &'a Analysis,
 }
@@ -52,6 +64,11 @@ const ALL: &[Rule] = &[
     levels::few_levels,
     levels::no_silent_level,
     levels::below_half_rise,
+    levels::non_monotone,
+    levels::drift,
+    rivals::lack_of_fit,
+    rivals::rival_better,
+    rivals::down_weighted,
     firing::few_spikes,
     firing::short_interval,
     firing::faster_than_intervals,
@@ -59,6 +76,7 @@ const ALL: &[Rule] = &[
     firing::strong_adaptation,
     firing::irregular,
     firing::spikes_outside,
+    firing::duplicates_dropped,
 ];
 
 /// All flags that the evidence raises.

@@ -5,7 +5,7 @@ use super::legend::{Mark, draw_legend, legend_height};
 use super::panel::{Frame, Panel, PanelStyle, draw_panel, rival_stroke, weight_of};
 use super::residual::{draw_residuals, has_off_scale};
 use crate::assess::{CellResult, ResponseResult, Status};
-use crate::curve::SMOOTHED_HYPERBOLA;
+use crate::curve::Curve;
 use crate::summary::numbers::{count_text, estimate_text};
 use crate::summary::text::{ID_LENGTH, visible};
 
@@ -216,8 +216,8 @@ fn draw_key(canvas: &mut Canvas, panel: &Panel, response: &ResponseResult, at: (
     };
     canvas.text((at.0, at.1 + 10.0), "rate functions, AICc weight", pale);
     let main = (
-        SMOOTHED_HYPERBOLA,
-        weight_of(response, SMOOTHED_HYPERBOLA),
+        Curve::SmoothedHyperbola.name(),
+        weight_of(response, Curve::SmoothedHyperbola.name()),
         solid(CURVE, STYLE.line),
     );
     let rivals = panel
