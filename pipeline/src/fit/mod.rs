@@ -18,5 +18,5 @@ pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
 pub use objective::Point;
-pub use robust::{Robust, robust};
 pub use profile::{Side, profile_side};
+pub use robust::{Robust, robust};
