@@ -4,6 +4,8 @@ use std::num::NonZeroUsize;
 use std::path::PathBuf;
 
 use clap::{Args, Parser, Subcommand, ValueEnum};
+use halfrise::curve::Curve;
+use halfrise::fit::BootstrapKind;
 use halfrise::rates::Response;
 use halfrise::settings::{Analysis, CellFigures};
 

@@ -18,7 +18,7 @@ fn measured(points: &[Point], fitted: &[f64], parameters: usize, extra_variance:
         parameters,
         points,
         fitted,
-        leverage: &[],
+        left_out: None,
         extra_variance,
         converged: true,
         evaluations: 1,
@@ -179,7 +179,7 @@ fn cell(seed: u64) -> Vec<Point> {
     let drives: Vec<f64> = (0..levels * repeats)
         .map(|i| top * (i / repeats) as f64 / (levels - 1) as f64)
         .collect();
-    let parameters = [(max_rate / half_rise).ln(), 1.0 / max_rate, threshold, noise.ln()];
+    let parameters = [half_rise / max_rate, 1.0 / max_rate, threshold, noise.ln()];
     let mut points = Vec::new();
     evaluate(Chart::Ceiling, &parameters, &drives, |i, rate, _| {
         let se = 0.5 + 0.03 * rate * (0.7 + 0.6 * rng.random::<f64>());

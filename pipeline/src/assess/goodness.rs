@@ -56,7 +56,10 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
         return out;
     }
     if n <= fit.parameters {
-        out.reason = format!("{n} steps are too few to measure a fit of {} parameters", fit.parameters);
+        out.reason = format!(
+            "{n} steps are too few to measure a fit of {} parameters",
+            fit.parameters
+        );
         return out;
     }
     let residuals: Vec<f64> = fit

@@ -29,12 +29,7 @@ pub fn hill(drive: f64, parameters: &[f64; 4]) -> (f64, [f64; 4]) {
     let slope = rate * rest;
     (
         rate,
-        [
-            rate,
-            -exponent * slope,
-            -exponent * slope / above,
-            power * slope,
-        ],
+        [rate, -exponent * slope, -exponent * slope / above, power * slope],
     )
 }
 
@@ -64,7 +59,10 @@ mod tests {
             assert!((hill(190.0, &p).0 - 45.0).abs() < 1e-12);
             for drive in [40.0 + 1e-13, 41.0, 1e12, 1e300] {
                 let (rate, slopes) = hill(drive, &p);
-                assert!(rate.is_finite() && slopes.iter().all(|s| s.is_finite()), "{drive}");
+                assert!(
+                    rate.is_finite() && slopes.iter().all(|s| s.is_finite()),
+                    "{drive}"
+                );
             }
             let (_, slopes) = hill(130.0, &p);
             for k in 0..4 {
@@ -73,7 +71,10 @@ mod tests {
                 up[k] += step;
                 down[k] -= step;
                 let slope = (hill(130.0, &up).0 - hill(130.0, &down).0) / (2.0 * step);
-                assert!((slope - slopes[k]).abs() < 1e-6 * slopes[k].abs().max(1e-3), "{exponent} {k}");
+                assert!(
+                    (slope - slopes[k]).abs() < 1e-6 * slopes[k].abs().max(1e-3),
+                    "{exponent} {k}"
+                );
             }
         }
     }

@@ -39,7 +39,10 @@ mod tests {
         assert!((logistic(300.0, &p).0 + logistic(100.0, &p).0 - 80.0).abs() < 1e-12);
         for drive in [-1e300, -1e9, 1e9, 1e300] {
             let (rate, slopes) = logistic(drive, &p);
-            assert!(rate.is_finite() && slopes.iter().all(|s| s.is_finite()), "{drive}");
+            assert!(
+                rate.is_finite() && slopes.iter().all(|s| s.is_finite()),
+                "{drive}"
+            );
         }
         let step = logistic(201.0, &[p[0], 200.0, -600.0]);
         assert!((step.0 - 80.0).abs() < 1e-12 && step.1.iter().all(|s| s.is_finite()));
@@ -56,7 +59,10 @@ mod tests {
                 up[k] += step;
                 down[k] -= step;
                 let slope = (logistic(drive, &up).0 - logistic(drive, &down).0) / (2.0 * step);
-                assert!((slope - slopes[k]).abs() < 1e-6 * slopes[k].abs().max(1e-3), "{drive} {k}");
+                assert!(
+                    (slope - slopes[k]).abs() < 1e-6 * slopes[k].abs().max(1e-3),
+                    "{drive} {k}"
+                );
             }
         }
     }

@@ -41,7 +41,12 @@ mod tests {
         let expected = 1.0 / (0.002 + 0.02 * (2.0_f64).ln());
         assert!((refractory_integrator(200.0, &p).0 - expected).abs() < 1e-12 * expected);
         assert!((refractory_integrator(1e12, &p).0 - 500.0).abs() < 1e-6);
-        assert!(refractory_integrator(100.0 + 1e-13, &p).1.iter().all(|s| s.is_finite()));
+        assert!(
+            refractory_integrator(100.0 + 1e-13, &p)
+                .1
+                .iter()
+                .all(|s| s.is_finite())
+        );
     }
 
     #[test]
@@ -54,8 +59,8 @@ mod tests {
                 let (mut up, mut down) = (p, p);
                 up[k] += step;
                 down[k] -= step;
-                let slope =
-                    (refractory_integrator(drive, &up).0 - refractory_integrator(drive, &down).0) / (2.0 * step);
+                let slope = (refractory_integrator(drive, &up).0 - refractory_integrator(drive, &down).0)
+                    / (2.0 * step);
                 assert!((slope - slopes[k]).abs() < 1e-5 * slopes[k].abs(), "{drive} {k}");
             }
         }

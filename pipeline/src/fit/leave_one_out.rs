@@ -45,7 +45,12 @@ pub fn leave_one_level_out<const P: usize>(
     for (k, drive) in levels.drives.iter().enumerate() {
         let weight = levels.root_weights[k];
         let (at, slopes) = rate(*drive, &full.parameters);
-        let start = downdated(full, &options, weight * (levels.rates[k] - at), &slopes.map(|s| weight * s));
+        let start = downdated(
+            full,
+            &options,
+            weight * (levels.rates[k] - at),
+            &slopes.map(|s| weight * s),
+        );
         without.root_weights[k] = 0.0;
         let found = minimise(&without, start, &options);
         without.root_weights[k] = weight;

@@ -186,7 +186,13 @@ impl<'a> Ground<'a> {
     fn new(levels: &'a Levels, peak: f64, leave_out: bool) -> Self {
         let (lowest, highest) = (levels.drives[0], levels.drives[levels.drives.len() - 1]);
         let range = highest - lowest;
-        let first = |fraction: f64| levels.rates.iter().position(|r| *r > fraction * peak).unwrap_or(0);
+        let first = |fraction: f64| {
+            levels
+                .rates
+                .iter()
+                .position(|r| *r > fraction * peak)
+                .unwrap_or(0)
+        };
         // From two levels below the first rate to the level of half the peak.
         let (from, to) = (first(0.0).saturating_sub(2), first(0.5).max(1));
         let middles: Vec<f64> = levels.drives[from..=to]
@@ -319,7 +325,11 @@ impl<'a> Ground<'a> {
         let mut starts = Vec::new();
         for t in self.thresholds() {
             for n in EXPONENTS {
-                starts.extend(WIDTHS[1..].iter().map(|w| [0.0, (w * (self.highest - t)).ln(), t, n.ln()]));
+                starts.extend(
+                    WIDTHS[1..]
+                        .iter()
+                        .map(|w| [0.0, (w * (self.highest - t)).ln(), t, n.ln()]),
+                );
             }
         }
         self.search(&Plan {
@@ -345,7 +355,12 @@ impl<'a> Ground<'a> {
         }
         let least = 1e-6 * self.highest;
         let mut starts = Vec::new();
-        let first = l.drives.iter().copied().find(|d| *d > 0.0).unwrap_or(self.highest);
+        let first = l
+            .drives
+            .iter()
+            .copied()
+            .find(|d| *d > 0.0)
+            .unwrap_or(self.highest);
         let close = [0.02, 0.3, 0.9].map(|part| part * first);
         for t in self.thresholds().filter(|t| *t > least).chain(close) {
             // 1/rate = t_ref + tau L is a straight line in L.
@@ -358,9 +373,17 @@ impl<'a> Ground<'a> {
                 }
             }
             let slope = (s * sxy - sx * sy) / (s * sxx - sx * sx);
-            let free = if slope.is_finite() && slope > 0.0 { slope } else { sy / sx };
+            let free = if slope.is_finite() && slope > 0.0 {
+                slope
+            } else {
+                sy / sx
+            };
             let t_ref = (sy - free * sx) / s;
-            let (tau, t_ref) = if t_ref >= 0.0 { (free, t_ref) } else { (sy / sx, 0.0) };
+            let (tau, t_ref) = if t_ref >= 0.0 {
+                (free, t_ref)
+            } else {
+                (sy / sx, 0.0)
+            };
             if tau.is_finite() && tau > 0.0 && t_ref.is_finite() {
                 starts.push([tau.ln(), t_ref, t]);
             }
@@ -521,14 +544,7 @@ impl<'a> Ground<'a> {
         }
         let left_out = (self.leave_out && best.converged).then(|| {
             leave_one_level_out(l, best, options, plan.at, |levels, start, options| {
-                minimise(
-                    &Problem {
-                        levels,
-                        at: plan.at,
-                    },
-                    start,
-                    options,
-                )
+                minimise(&Problem { levels, at: plan.at }, start, options)
             })
         });
         evaluations += left_out.as_ref().map_or(0, |left| left.evaluations);

@@ -223,12 +223,7 @@ mod tests {
     fn points(seed: u64) -> Vec<Point> {
         let mut rng = ChaCha8Rng::seed_from_u64(seed);
         let drives: Vec<f64> = (0..40).map(|i| f64::from(i) * 700.0 / 39.0).collect();
-        let parameters = [
-            TRUTH[1] / TRUTH[0],
-            1.0 / TRUTH[0],
-            TRUTH[2],
-            TRUTH[3].ln(),
-        ];
+        let parameters = [TRUTH[1] / TRUTH[0], 1.0 / TRUTH[0], TRUTH[2], TRUTH[3].ln()];
         let mut points = Vec::new();
         evaluate(Chart::Ceiling, &parameters, &drives, |i, rate, _| {
             let se = 0.5 + 0.03 * rate;

@@ -264,12 +264,9 @@ impl Case<'_> {
         result.extra_sd_hz = Some(fit.extra_variance.sqrt());
         result.ceiling = Some(self.ceiling(fit, e));
         let mut curve = vec![0.0; points.len()];
-        evaluate(
-            Chart::Ceiling,
-            &fit.solution.parameters,
-            &drives,
-            |i, rate, _| curve[i] = rate,
-        );
+        evaluate(Chart::Ceiling, &fit.solution.parameters, &drives, |i, rate, _| {
+            curve[i] = rate
+        });
         for (at, step) in order.iter().enumerate() {
             let (point, rate) = (&points[at], &mut rates[*step]);
             rate.fitted_hz = Some(curve[at]);
@@ -451,8 +448,7 @@ fn measure_main(fitted: &Fitted, curve: Curve, leave_out: bool) -> (crate::asses
         &levels.drives,
         |i, rate, _| level_rates[i] = rate,
     );
-    let left_out =
-        (leave_out && converged).then(|| leave_out_of_main(levels, &solution, &options));
+    let left_out = (leave_out && converged).then(|| leave_out_of_main(levels, &solution, &options));
     evaluations += left_out.as_ref().map_or(0, |left| left.evaluations);
     let measured = measure(
         fitted,
@@ -511,8 +507,7 @@ fn measure(
     evaluations: u64,
 ) -> crate::assess::Goodness {
     let levels = &fitted.fit.levels;
-    let spread_out =
-        |values: &[f64]| -> Vec<f64> { levels.level_of_point().map(|l| values[l]).collect() };
+    let spread_out = |values: &[f64]| -> Vec<f64> { levels.level_of_point().map(|l| values[l]).collect() };
     if level_rates.len() != levels.drives.len() {
         return not_fitted(curve, fitted.points.len(), "no start leads to a finite cost");
     }

@@ -21,7 +21,8 @@ const SE: &str = "Standard error (delta method); null: not estimated";
 const LO: &str = "Lower bound of the 95 % profile interval; -inf: open; null: not estimated";
 const HI: &str = "Upper bound of the 95 % profile interval; inf: open; null: not estimated";
 const PERCENTILE: &str = "End of the 95 % percentile interval of the bootstrap; infinite: open";
-const BCA: &str = "End of the 95 % BCa interval of the bootstrap (Efron 1987); infinite: open; null: not estimated";
+const BCA: &str =
+    "End of the 95 % BCa interval of the bootstrap (Efron 1987); infinite: open; null: not estimated";
 const V_THRESHOLD: &str =
     "Effective threshold potential of the cell under conductance; not estimated yet by this version";
 

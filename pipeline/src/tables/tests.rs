@@ -157,8 +157,6 @@ fn refused(response: Response) -> ResponseResult {
         covariance: None,
         bootstrap: None,
         repeats: None,
-        bootstrap: None,
-        repeats: None,
         goodness: vec![],
         curve: vec![],
         rates: vec![],
