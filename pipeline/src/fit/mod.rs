@@ -3,14 +3,19 @@
 mod estimates;
 mod extra_sd;
 pub mod hyperbola_fit;
+pub mod leave_one_out;
 pub mod main_fit;
 pub mod objective;
 mod profile;
+pub mod rival_fit;
+mod rival_starts;
 pub mod solver;
 mod starts;
 
 pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
+pub use leave_one_out::{LeftOut, NotPredicted, leave_one_level_out};
 pub use objective::Point;
 pub use profile::{Side, profile_side};
+pub use rival_fit::{RivalFit, Unfitted, fit_rival};
