@@ -29,8 +29,11 @@ pub const MOST_PARAMETERS: usize = 4;
 /// Starts, in different gaps where there are gaps, that are followed to a local minimum.
 const STARTS_FOLLOWED: usize = 5;
 
-/// Rise of the cost beyond twice the best above which a local minimum is not looked at again.
+/// Rise of the cost beyond twice the best above which a gap holds no start worth following.
 const HOPELESS: f64 = 10.0;
+
+/// A rough search that ends above the best by more than this factor is not taken to its minimum.
+const PROMISING: f64 = 1.15;
 
 /// Times that the search may switch to another local minimum once the weights have changed.
 const SWITCHES: usize = 6;
@@ -393,8 +396,18 @@ impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
             let at = curve.at(*drive);
             sums.add(w * (rate - at.rate), &at.derivatives.map(|d| w * d));
         }
+        // A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an
+        // all but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its
+        // gradient is touched, so the minimum stays where it is.
+        let largest = (0..P).map(|i| sums.curvature[i][i]).fold(0.0, f64::max);
+        for i in 0..P {
+            sums.curvature[i][i] += CURVATURE_FLOOR * largest;
+        }
     }
 }
+
+/// Least curvature of a parameter, as a fraction of the largest.
+const CURVATURE_FLOOR: f64 = 1e-13;
 
 /// The gap (index of the drive above it) in which a threshold lies; one that is on a drive belongs to the gap above.
 fn gap_of(drives: &[f64], threshold: f64) -> usize {
@@ -491,53 +504,26 @@ impl<const P: usize> Search<'_, P> {
     /// The best minimum and whether it came to rest; `None` without any start.
     fn run<R: Rival<P>>(&mut self) -> Option<(Solution<P>, bool)> {
         let options = self.options;
-        let rough = SolverOptions {
-            decrease_tolerance: 1e-3,
-            max_iterations: 15,
-            ..options
-        };
         let mut followed: Vec<Solution<P>> = Vec::new();
-        let mut best: Option<Solution<P>> = None;
-        let mut converged = false;
-        // Settled minima, with the variance and the weighted sum of squares' likelihood at their own weights.
-        let mut settled: Vec<(f64, Solution<P>, f64, bool)> = Vec::new();
-        for _ in 0..SWITCHES {
-            // Ranks change with the weights.
-            for start in self.starts::<R>() {
-                let found = self.descend::<R>(start.parameters, &rough);
-                if !followed.iter().any(|f| same(f, &found)) {
-                    followed.push(found);
-                }
-            }
-            let mut improved = best.is_none();
-            followed.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
-            let least = best.as_ref().map_or(followed.first()?.cost(), Solution::cost);
+        self.follow::<R>(&mut followed);
+        let mut best = *followed.first()?;
+        if !self.estimated {
             for i in 0..followed.len() {
-                if !(followed[i].cost() < 2.0 * least + HOPELESS) {
-                    continue;
-                }
-                let found = self.descend::<R>(followed[i].parameters, &options);
-                followed[i] = found;
-                if best
-                    .as_ref()
-                    .is_none_or(|b| found.cost() < b.cost() * (1.0 - 1e-8) - 1e-14)
-                {
-                    best = Some(found);
-                    improved = true;
+                if followed[i].cost() < best.cost() * PROMISING {
+                    let found = self.descend::<R>(followed[i].parameters, &options);
+                    if found.cost() < best.cost() || (i == 0 && found.cost() <= best.cost()) {
+                        best = found;
+                    }
                 }
             }
-            let at = best.as_mut()?;
-            if !improved {
-                break;
-            }
-            if !self.estimated {
-                converged = at.converged;
-                break;
-            }
-            let mut moved = *at;
-            converged = self.settle::<R>(&mut moved);
-            *at = moved;
-            if settled.iter().any(|(_, s, _, _)| same(s, &moved)) {
+            return Some((best, best.converged));
+        }
+        // Settled minima with the likelihood of their residuals, each at its own weights.
+        let mut settled: Vec<(f64, Solution<P>, f64, bool)> = Vec::new();
+        let mut converged = false;
+        for _ in 0..SWITCHES {
+            converged = self.settle::<R>(&mut best);
+            if settled.iter().any(|(_, s, _, _)| same(s, &best)) {
                 // Two minima, each the better one at the other's weights: the likelier of them stays.
                 let (_, solution, variance, rested) = settled
                     .iter()
@@ -547,17 +533,66 @@ impl<const P: usize> Search<'_, P> {
                 self.levels.reweigh(self.points, variance);
                 return Some((solution, rested));
             }
-            let likelihood = -0.5 * (moved.cost() + self.points.iter().map(|p| (p.se * p.se + self.variance).ln()).sum::<f64>());
-            settled.push((likelihood, moved, self.variance, converged));
-            for f in &mut followed {
-                // Costs at the new weights.
-                let mut sums = NormalSums::default();
-                Cost::<R>::new(&self.levels).accumulate(&f.parameters, &mut sums);
-                f.sums.cost = sums.cost;
-                self.evaluations += 1;
+            let spread: f64 = self.points.iter().map(|p| (p.se * p.se + self.variance).ln()).sum();
+            settled.push((-0.5 * (best.cost() + spread), best, self.variance, converged));
+            // The settled weights may favour another minimum.
+            followed.retain(|f| !same(f, &best));
+            self.follow::<R>(&mut followed);
+            let mut improved = false;
+            for i in 0..followed.len() {
+                if same(&followed[i], &best) || !(followed[i].cost() < best.cost() * PROMISING) {
+                    continue;
+                }
+                let found = self.descend::<R>(followed[i].parameters, &options);
+                followed[i] = found;
+                if found.cost() < best.cost() * (1.0 - 1e-8) - 1e-14 {
+                    best = found;
+                    improved = true;
+                }
+            }
+            if !improved {
+                break;
             }
         }
-        Some((best?, converged))
+        Some((best, converged))
+    }
+
+    /// Roughly to a minimum from every start that leads to none of those `known`, at the present weights; all of them
+    /// in order of cost.
+    fn follow<R: Rival<P>>(&mut self, known: &mut Vec<Solution<P>>) {
+        let rough = SolverOptions {
+            decrease_tolerance: 3e-3,
+            max_iterations: 12,
+            ..self.options
+        };
+        for f in known.iter_mut() {
+            // Costs at the present weights.
+            let mut sums = NormalSums::default();
+            Cost::<R>::new(&self.levels).accumulate(&f.parameters, &mut sums);
+            sums.curvature = sums.symmetric();
+            f.sums = sums;
+            self.evaluations += 1;
+        }
+        for start in self.starts::<R>() {
+            let found = self.inside::<R>(start.parameters, &rough);
+            if !known.iter().any(|f| same(f, &found)) {
+                known.push(found);
+            }
+        }
+        known.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
+        known.truncate(2 * STARTS_FOLLOWED);
+    }
+
+    /// Down to the minimum within the gap of `start`.
+    fn inside<R: Rival<P>>(&mut self, start: [f64; P], options: &SolverOptions<P>) -> Solution<P> {
+        let drives = &self.levels.drives;
+        let bounded = match R::THRESHOLD {
+            Some(index) => enter_gap(options, index, drives, gap_of(drives, start[index])),
+            None => *options,
+        };
+        let found = minimise(&Cost::<R>::new(&self.levels), start, &bounded);
+        self.evaluations += found.evaluations;
+        found
     }
 
     /// The best start of each gap, or of the whole, the best few of them in order.
@@ -620,9 +655,7 @@ impl<const P: usize> Search<'_, P> {
                 max_iterations: if round < 3 { 3 } else { self.options.max_iterations },
                 ..self.options
             };
-            if round > 0 {
-                *best = self.descend::<R>(best.parameters, &limited);
-            }
+            *best = self.inside::<R>(best.parameters, &limited);
             self.set_residuals::<R>(&best.parameters);
             let target = extra_variance(&self.residuals, &errors, degrees);
             let change = target - self.variance;
@@ -642,8 +675,16 @@ impl<const P: usize> Search<'_, P> {
                     initial_damping: 1e-7,
                     ..self.options
                 };
+                let here = R::THRESHOLD.map(|index| best.parameters[index]);
                 *best = self.descend::<R>(best.parameters, &exact);
-                return best.converged;
+                let moved = R::THRESHOLD.zip(here).is_some_and(|(index, here)| {
+                    gap_of(&self.levels.drives, here) != gap_of(&self.levels.drives, best.parameters[index])
+                });
+                // In another gap the extra variance is another.
+                if !moved {
+                    return best.converged;
+                }
+                last_change = f64::INFINITY;
             }
         }
         false
