@@ -11,5 +11,6 @@ mod intervals;
 mod nist;
 mod recovery;
 mod referee;
+mod rivals;
 mod smoothed_hyperbola;
 mod support;

@@ -17,11 +17,10 @@ pub struct FittedCurve<'a> {
     pub points: &'a [Point],
     /// Fitted rate at each point, Hz.
     pub fitted: &'a [f64],
-    /// Share of its level's own weight in each point's fitted value (leverage of the level), 0 to 1; empty where the
-    /// covariance is not known.
-    pub leverage: &'a [f64],
     /// Extra variance, Hz^2.
     pub extra_variance: f64,
+    /// Leave-one-level-out RMSE, Hz ([`crate::fit::leave_one_level_out`]); `None` where a refit has no answer.
+    pub loo_rmse_hz: Option<f64>,
     /// Whether the search converged.
     pub converged: bool,
     /// Passes of the curve over the points.
@@ -81,7 +80,7 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
         out.lack_of_fit_p = Some(p);
     }
     out.runs_p = runs_p(&residuals);
-    out.loo_rmse_hz = leave_one_level_out(fit, &residuals);
+    out.loo_rmse_hz = fit.loo_rmse_hz;
     out
 }
 
@@ -214,39 +213,6 @@ pub fn runs_p(residuals: &[f64]) -> Option<f64> {
     let few: f64 = (2..=runs).map(probability).sum();
     let many: f64 = (runs..=up + down).map(probability).sum();
     Some((2.0 * few.min(many)).min(1.0))
-}
-
-/// RMSE of every step predicted from the fit without its level, by one linear step at the estimate: the mean residual
-/// of a level grows by 1/(1 - leverage) when the level is left out.
-fn leave_one_level_out(fit: &FittedCurve<'_>, residuals: &[f64]) -> Option<f64> {
-    if fit.leverage.len() != residuals.len() {
-        return None;
-    }
-    let mut sum = 0.0;
-    let mut start = 0;
-    while start < residuals.len() {
-        let count = fit.points[start..]
-            .iter()
-            .take_while(|p| p.drive == fit.points[start].drive)
-            .count();
-        let (mut weight, mut mean) = (0.0, 0.0);
-        for i in start..start + count {
-            let w = 1.0 / (fit.points[i].se.powi(2) + fit.extra_variance);
-            weight += w;
-            mean += w * residuals[i];
-        }
-        mean /= weight;
-        let leverage = fit.leverage[start];
-        // A level that alone decides a parameter cannot be predicted from the others.
-        if !(leverage < 1.0 - 1e-9) {
-            return None;
-        }
-        for r in &residuals[start..start + count] {
-            sum += (r - mean + mean / (1.0 - leverage)).powi(2);
-        }
-        start += count;
-    }
-    Some((sum / residuals.len() as f64).sqrt())
 }
 
 #[cfg(test)]
