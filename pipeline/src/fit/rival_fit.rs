@@ -399,14 +399,14 @@ impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
         // A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an
         // all but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its
         // gradient is touched, so the minimum stays where it is.
-        let largest = (0..P).map(|i| sums.curvature[i][i]).fold(0.0, f64::max);
+        let floor = CURVATURE_FLOOR * l.root_weights.iter().map(|w| w * w).sum::<f64>();
         for i in 0..P {
-            sums.curvature[i][i] += CURVATURE_FLOOR * largest;
+            sums.curvature[i][i] += floor;
         }
     }
 }
 
-/// Least curvature of a parameter, as a fraction of the largest.
+/// Least curvature of a parameter, as a fraction of what it has where one unit of it changes every rate by the peak.
 const CURVATURE_FLOOR: f64 = 1e-13;
 
 /// The gap (index of the drive above it) in which a threshold lies; one that is on a drive belongs to the gap above.
