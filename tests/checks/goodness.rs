@@ -18,7 +18,7 @@ fn measured(points: &[Point], fitted: &[f64], parameters: usize, extra_variance:
         parameters,
         points,
         fitted,
-        left_out: None,
+        loo_rmse_hz: None,
         extra_variance,
         converged: true,
         evaluations: 1,

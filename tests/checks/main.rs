@@ -13,5 +13,6 @@ mod intervals;
 mod nist;
 mod recovery;
 mod referee;
+mod rivals;
 mod smoothed_hyperbola;
 mod support;

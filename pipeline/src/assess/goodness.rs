@@ -18,10 +18,10 @@ pub struct FittedCurve<'a> {
     pub points: &'a [Point],
     /// Fitted rate at each point, Hz.
     pub fitted: &'a [f64],
-    /// Rate of each point predicted by the fit without its level, Hz; `None` where not computed or a refit failed.
-    pub left_out: Option<&'a [f64]>,
     /// Extra variance, Hz^2.
     pub extra_variance: f64,
+    /// Leave-one-level-out RMSE, Hz ([`crate::fit::leave_one_level_out`]); `None` where a refit has no answer.
+    pub loo_rmse_hz: Option<f64>,
     /// Whether the search converged.
     pub converged: bool,
     /// Passes of the curve over the points.
@@ -90,16 +90,7 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
         out.lack_of_fit_p = Some(p);
     }
     out.runs_p = runs_p(&residuals);
-    out.loo_rmse_hz = fit.left_out.and_then(|predicted| {
-        let sum: f64 = fit
-            .points
-            .iter()
-            .zip(predicted)
-            .map(|(p, f)| (p.rate - f).powi(2))
-            .sum();
-        let rmse = (sum / n as f64).sqrt();
-        (predicted.len() == n && rmse.is_finite()).then_some(rmse)
-    });
+    out.loo_rmse_hz = fit.loo_rmse_hz;
     out
 }
 

@@ -7,6 +7,62 @@
 //! The rectangular hyperbola (Michaelis & Menten 1913; for rates Naka & Rushton 1966 with exponent 1), shifted to a
 //! threshold.
 
+use super::{Curve, Rate, RateFunction, Units, bounded, tame_exp};
+
+/// The curve in a chart that has the ramp as its ordinary boundary point c = 0:
+///
+/// ```text
+/// rate = 1/(c + e),  e = 1/(gain (drive - threshold)),   chart (ln gain, c, threshold)
+/// c = 1/max_rate,    half_rise = 1/(gain c)
+/// ```
+///
+/// For cells that hardly bend, max rate and half-rise grow together and this chart stays well conditioned.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct GainCeiling {
+    gain: f64,
+    ceiling: f64,
+    threshold: f64,
+}
+
+impl RateFunction<3> for GainCeiling {
+    const CURVE: Curve = Curve::Hyperbola;
+    const THRESHOLD: Option<usize> = Some(2);
+
+    #[inline(always)]
+    fn new(parameters: &[f64; 3]) -> Self {
+        Self {
+            gain: tame_exp(parameters[0]),
+            ceiling: parameters[1],
+            threshold: parameters[2],
+        }
+    }
+
+    #[inline(always)]
+    fn at(&self, drive: f64) -> Rate<3> {
+        let above = bounded(drive - self.threshold);
+        if above <= 0.0 {
+            return Rate::SILENT;
+        }
+        let ramp = bounded(self.gain * above);
+        // The share of the rise still missing, 1/(1 + c ramp).
+        let missing = 1.0 / (1.0 + bounded(self.ceiling * ramp));
+        let rate = bounded(ramp * missing);
+        Rate::bounded(
+            rate,
+            [rate * missing, -rate * rate, -self.gain * missing * missing],
+        )
+    }
+
+    fn natural(parameters: &[f64; 3], units: Units) -> [f64; 3] {
+        let [ln_gain, ceiling, threshold] = *parameters;
+        [
+            units.rate / ceiling,
+            units.drive / (ln_gain.exp() * ceiling),
+            units.drive * threshold,
+        ]
+    }
+}
+
 /// Rate at one drive and its derivatives.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
 pub struct Hyperbola {
@@ -56,6 +112,34 @@ mod tests {
                     "{drive} {k}"
                 );
             }
+        }
+    }
+
+    #[test]
+    fn the_other_chart_is_the_same_curve() {
+        use super::super::testing::{always_finite, derivatives_match};
+        derivatives_match::<3, GainCeiling>([0.3, 0.6, 0.2], &[-1.0, 0.3, 0.8, 5.0]);
+        derivatives_match::<3, GainCeiling>([0.3, 1e-3, 0.2], &[-1.0, 0.3, 0.8, 5.0]);
+        always_finite::<3, GainCeiling>([
+            &[-700.0, 0.0, 20.0, 700.0],
+            &[0.0, 1e-9, 1.0, 10.0],
+            &[-1e300, 0.0, 1.0],
+        ]);
+        let chart = [(90.0_f64 / 150.0).ln(), 1.0 / 90.0, 40.0];
+        let natural = GainCeiling::natural(
+            &chart,
+            Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+        );
+        for (found, wanted) in natural.iter().zip([90.0, 150.0, 40.0]) {
+            assert!((found / wanted - 1.0_f64).abs() < 1e-13);
+        }
+        let p = [(90.0_f64).ln(), (150.0_f64).ln(), 40.0];
+        for drive in [-10.0, 40.0, 41.0, 190.0, 1e5] {
+            let (a, b) = (GainCeiling::new(&chart).at(drive).rate, hyperbola(drive, &p).rate);
+            assert!((a - b).abs() < 1e-13 * 90.0, "{drive}");
         }
     }
 

@@ -1,40 +1,75 @@
-//! The ramp: rate in proportion to the drive above a threshold, without noise.
+//! The threshold-linear rate.
 //!
 //! ```text
 //! rate = gain * (drive - threshold) above the threshold, 0 at or below it
 //! ```
 //!
-//! The threshold-linear cell (common practice); the smoothed ramp's limit for noise SD 0. Two parameters, so at least
-//! two drives above threshold.
+//! Hartline & Ratliff (1957, *J. Gen. Physiol.* 40:357). It is the smoothed ramp without noise and the hyperbola
+//! without a ceiling. Chart (ln gain, threshold). The derivative by the threshold jumps from 0 to -gain at it; far
+//! above, the rate grows without limit.
 
-/// Rate (Hz) at `drive` (pA or nS) and its derivatives by `parameters` = (ln gain in Hz per drive unit, threshold). At
-/// the threshold itself the derivatives are those of the silent side: zero.
-#[inline]
-pub fn ramp(drive: f64, parameters: &[f64; 2]) -> (f64, [f64; 2]) {
-    let [ln_gain, threshold] = *parameters;
-    let above = drive - threshold;
-    if above <= 0.0 {
-        return (0.0, [0.0; 2]);
+use super::{Curve, Rate, RateFunction, Units, bounded, tame_exp};
+
+/// The ramp in the chart (ln gain, threshold).
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Ramp {
+    gain: f64,
+    threshold: f64,
+}
+
+impl RateFunction<2> for Ramp {
+    const CURVE: Curve = Curve::Ramp;
+    const THRESHOLD: Option<usize> = Some(1);
+
+    #[inline(always)]
+    fn new(parameters: &[f64; 2]) -> Self {
+        Self {
+            gain: tame_exp(parameters[0]),
+            threshold: parameters[1],
+        }
     }
-    let gain = ln_gain.exp();
-    let rate = gain * above;
-    (rate, [rate, -gain])
+
+    #[inline(always)]
+    fn at(&self, drive: f64) -> Rate<2> {
+        let above = bounded(drive - self.threshold);
+        if above <= 0.0 {
+            return Rate::SILENT;
+        }
+        let rate = self.gain * above;
+        Rate::bounded(rate, [rate, -self.gain])
+    }
+
+    fn natural(parameters: &[f64; 2], units: Units) -> [f64; 2] {
+        [
+            parameters[0].exp() * units.rate / units.drive,
+            units.drive * parameters[1],
+        ]
+    }
 }
 
 #[cfg(test)]
 mod tests {
+    use super::super::testing::{always_finite, derivatives_match};
     use super::*;
-    use crate::curve::smoothed_ramp;
 
     #[test]
-    fn known_values_and_the_limit_of_the_smoothed_ramp() {
-        let p = [(0.4_f64).ln(), 50.0];
-        assert_eq!(ramp(50.0, &p), (0.0, [0.0; 2]));
-        assert_eq!(ramp(-1e9, &p).0, 0.0);
-        let (rate, slopes) = ramp(150.0, &p);
-        assert!((rate - 40.0).abs() < 1e-12 && (slopes[0] - 40.0).abs() < 1e-12);
-        assert!((slopes[1] + 0.4).abs() < 1e-12);
-        let smoothed = 0.4 * smoothed_ramp::ramp(100.0, 1e-3).value;
-        assert!((smoothed - rate).abs() < 1e-12);
+    fn derivatives_values_and_limits() {
+        derivatives_match::<2, Ramp>([-0.4, 0.3], &[-1.0, 0.2, 0.4, 5.0]);
+        let curve = Ramp::new(&[0.25_f64.ln(), 100.0]);
+        assert!((curve.at(180.0).rate - 20.0).abs() < 1e-13);
+        assert_eq!(curve.at(100.0), Rate::SILENT);
+        let natural = Ramp::natural(
+            &[0.0, 0.5],
+            Units {
+                drive: 400.0,
+                rate: 80.0,
+            },
+        );
+        assert_eq!(natural, [0.2, 200.0]);
+    }
+
+    #[test]
+    fn finite_everywhere() {
+        always_finite::<2, Ramp>([&[-700.0, 0.0, 20.0, 700.0], &[-1e300, 0.0, 1.0]]);
     }
 }

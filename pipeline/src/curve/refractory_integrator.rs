@@ -1,68 +1,146 @@
-//! The leaky integrate-and-fire cell with a refractory period, without noise.
+//! The leaky integrate-and-fire neuron with an absolute refractory time, without noise.
 //!
 //! ```text
-//! rate = 1/(t_ref + tau ln(drive/(drive - threshold))) above the threshold (> 0), 0 at or below it
+//! rate = 1/(refractory + time_constant * ln(drive/(drive - rheobase)))  for drive > rheobase > 0, else 0
 //! ```
 //!
-//! The membrane starts at rest after every spike, so that the drive sets both the asymptote and the threshold (Stein
-//! 1967; Dayan & Abbott 2001, section 5.4). Three parameters. The slope is infinite at the threshold; far above it the
-//! rate approaches 1/t_ref.
+//! The membrane starts at rest after each spike (reset = rest), so drive is counted from rest: a drive of zero is no
+//! input. Lapicque (1907, *J. Physiol. Pathol. Gen.* 9:620); with the refractory time Stein (1967, *Biophys. J.* 7:37);
+//! Dayan & Abbott (2001, *Theoretical Neuroscience*, chapter 5).
+//!
+//! Chart, with two ordinary boundary points: no refractory time (no ceiling) and no rheobase (a membrane that does not
+//! leak, where the curve is a hyperbola through zero):
+//!
+//! ```text
+//! rate = 1/(refractory + m/gain),  m = ln(drive/(drive - rheobase))/rheobase  (1/drive for rheobase 0)
+//! chart (refractory, ln gain, rheobase),   gain = 1/(time_constant * rheobase)
+//! ```
+//!
+//! `gain` is the slope far above the rheobase without refractory time, in rate per drive. Far above, the rate tends to
+//! 1/refractory. Towards the rheobase it falls to zero only as 1/ln: the slope is infinite there, and the derivatives
+//! at the rheobase itself are given as those of the silent side.
 
-/// Rate (Hz) at `drive` (pA or nS) and its derivatives by `parameters` = (ln tau in s, t_ref in s, threshold). At or
-/// below the threshold all are zero; a threshold at or below 0 is taken as just above it.
-#[inline]
-pub fn refractory_integrator(drive: f64, parameters: &[f64; 3]) -> (f64, [f64; 3]) {
-    let [ln_tau, t_ref, threshold] = *parameters;
-    let threshold = threshold.max(f64::MIN_POSITIVE);
-    let above = drive - threshold;
-    if above <= 0.0 {
-        return (0.0, [0.0; 3]);
+use super::{Curve, Rate, RateFunction, Units, bounded, tame_exp};
+
+/// The curve in the chart (refractory, ln gain, rheobase); a rheobase below zero counts as zero.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct RefractoryIntegrator {
+    refractory: f64,
+    per_gain: f64,
+    rheobase: f64,
+}
+
+/// Below this rheobase/drive the series is exact and the difference of logarithms is not.
+const SMALL: f64 = 0.01;
+
+impl RefractoryIntegrator {
+    /// m and dm/drheobase at a drive above the rheobase.
+    #[inline(always)]
+    fn leak(drive: f64, rheobase: f64) -> (f64, f64) {
+        let q = rheobase / drive;
+        if q < SMALL {
+            // m = (1 + q/2 + q^2/3 + ...)/drive, dm/drheobase = (1/2 + 2q/3 + 3q^2/4 + ...)/drive^2.
+            let (mut sum, mut slope) = (0.0, 0.0);
+            for k in (1..=8).rev() {
+                let k = f64::from(k);
+                sum = sum * q + 1.0 / k;
+                slope = slope * q + k / (k + 1.0);
+            }
+            return (sum / drive, slope / drive / drive);
+        }
+        let m = -(-q).ln_1p() / rheobase;
+        (m, (1.0 / (drive - rheobase) - m) / rheobase)
     }
-    let tau = ln_tau.exp();
-    let charging = tau * (threshold / above).ln_1p();
-    let period = t_ref + charging;
-    if period <= 0.0 {
-        // Without refractoriness and far above threshold: beyond every rate.
-        return (f64::INFINITY, [f64::NAN; 3]);
+}
+
+impl RateFunction<3> for RefractoryIntegrator {
+    const CURVE: Curve = Curve::RefractoryIntegrator;
+    const THRESHOLD: Option<usize> = Some(2);
+
+    #[inline(always)]
+    fn new(parameters: &[f64; 3]) -> Self {
+        Self {
+            refractory: parameters[0],
+            per_gain: tame_exp(-parameters[1]),
+            rheobase: parameters[2].max(0.0),
+        }
     }
-    let rate = 1.0 / period;
-    let square = rate * rate;
-    (rate, [-square * charging, -square, -square * tau / above])
+
+    #[inline(always)]
+    fn at(&self, drive: f64) -> Rate<3> {
+        if drive <= self.rheobase {
+            return Rate::SILENT;
+        }
+        let (m, by_rheobase) = Self::leak(drive, self.rheobase);
+        let time = bounded(m * self.per_gain);
+        let rate = bounded(1.0 / (self.refractory + time));
+        // Share of the interval that is integration: no overflow where both are huge.
+        let share = (time * rate).min(1.0);
+        let leak = if m > 0.0 { bounded(by_rheobase / m) } else { 0.0 };
+        Rate::bounded(rate, [-rate * rate, rate * share, -rate * share * leak])
+    }
+
+    fn natural(parameters: &[f64; 3], units: Units) -> [f64; 3] {
+        let [refractory, ln_gain, rheobase] = *parameters;
+        [
+            refractory / units.rate,
+            1.0 / (ln_gain.exp() * rheobase * units.rate),
+            rheobase * units.drive,
+        ]
+    }
 }
 
 #[cfg(test)]
 mod tests {
+    use super::super::testing::{always_finite, derivatives_match};
     use super::*;
 
     #[test]
-    fn known_values_and_the_ceiling() {
-        let p = [(0.02_f64).ln(), 0.002, 100.0];
-        assert_eq!(refractory_integrator(100.0, &p), (0.0, [0.0; 3]));
-        let expected = 1.0 / (0.002 + 0.02 * (2.0_f64).ln());
-        assert!((refractory_integrator(200.0, &p).0 - expected).abs() < 1e-12 * expected);
-        assert!((refractory_integrator(1e12, &p).0 - 500.0).abs() < 1e-6);
-        assert!(
-            refractory_integrator(100.0 + 1e-13, &p)
-                .1
-                .iter()
-                .all(|s| s.is_finite())
-        );
+    fn derivatives_match_differences() {
+        for parameters in [[0.0, 0.4, 0.2], [0.5, -0.3, 0.001], [0.9, 1.0, 0.34]] {
+            derivatives_match::<3, RefractoryIntegrator>(parameters, &[0.1, 0.36, 0.6, 1.0, 4.0]);
+        }
     }
 
     #[test]
-    fn derivatives_match_differences() {
-        let p = [(0.02_f64).ln(), 0.002, 100.0];
-        for drive in [101.0, 150.0, 900.0] {
-            let (_, slopes) = refractory_integrator(drive, &p);
-            for k in 0..3 {
-                let step = [1e-6, 1e-8, 1e-5][k];
-                let (mut up, mut down) = (p, p);
-                up[k] += step;
-                down[k] -= step;
-                let slope = (refractory_integrator(drive, &up).0 - refractory_integrator(drive, &down).0)
-                    / (2.0 * step);
-                assert!((slope - slopes[k]).abs() < 1e-5 * slopes[k].abs(), "{drive} {k}");
-            }
+    fn closed_form_and_limits() {
+        let (refractory, tau, rheobase): (f64, f64, f64) = (0.004, 0.02, 200.0);
+        let chart = [refractory, -(tau * rheobase).ln(), rheobase];
+        let natural = RefractoryIntegrator::natural(
+            &chart,
+            Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+        );
+        for (found, wanted) in natural.iter().zip([refractory, tau, rheobase]) {
+            assert!((found / wanted - 1.0).abs() < 1e-13);
         }
+        let curve = RefractoryIntegrator::new(&chart);
+        for drive in [200.0001, 250.0, 400.0, 1e4, 1e7] {
+            let wanted = 1.0 / (refractory + tau * (drive / (drive - rheobase)).ln());
+            assert!((curve.at(drive).rate / wanted - 1.0).abs() < 1e-9, "{drive}");
+        }
+        assert_eq!(curve.at(200.0), Rate::SILENT);
+        assert_eq!(curve.at(-500.0), Rate::SILENT);
+        assert!((curve.at(1e15).rate - 250.0).abs() < 1e-6);
+        // Series and logarithm meet.
+        let (low, high) = (
+            RefractoryIntegrator::leak(100.0, 0.9999999),
+            RefractoryIntegrator::leak(100.0, 1.0000001),
+        );
+        assert!((low.0 / high.0 - 1.0).abs() < 1e-8 && (low.1 / high.1 - 1.0).abs() < 1e-7);
+        // No rheobase: the hyperbola through zero.
+        let free = RefractoryIntegrator::new(&[0.01, 0.5_f64.ln(), 0.0]);
+        assert!((free.at(200.0).rate - 100.0 / (1.0 + 1.0)).abs() < 1e-12);
+    }
+
+    #[test]
+    fn finite_everywhere() {
+        always_finite::<3, RefractoryIntegrator>([
+            &[0.0, 1e-9, 1.0, 1e6],
+            &[-700.0, 0.0, 20.0, 700.0],
+            &[-1.0, 0.0, 1e-300, 1.0, 1e300],
+        ]);
     }
 }

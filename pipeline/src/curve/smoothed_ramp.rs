@@ -12,6 +12,8 @@ use std::f64::consts::{FRAC_1_SQRT_2, PI};
 
 use libm::erfc;
 
+use super::{Curve, Rate, RateFunction, Units, bounded, tame_exp};
+
 /// Value and moments of the smoothed ramp at one drive, per unit of gain.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Ramp {
@@ -41,9 +43,70 @@ pub fn ramp(x: f64, sigma: f64) -> Ramp {
     }
 }
 
+/// The curve in the chart (ln gain, threshold, ln noise SD).
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct SmoothedRamp {
+    gain: f64,
+    threshold: f64,
+    noise: f64,
+}
+
+impl RateFunction<3> for SmoothedRamp {
+    const CURVE: Curve = Curve::SmoothedRamp;
+    const THRESHOLD: Option<usize> = None;
+
+    #[inline(always)]
+    fn new(parameters: &[f64; 3]) -> Self {
+        Self {
+            gain: tame_exp(parameters[0]),
+            threshold: parameters[1],
+            noise: tame_exp(parameters[2]),
+        }
+    }
+
+    #[inline(always)]
+    fn at(&self, drive: f64) -> Rate<3> {
+        let x = bounded(drive - self.threshold);
+        if !(x.abs() <= 40.0 * self.noise) {
+            // Out of the noise's reach: the ramp, or nothing at all.
+            if x < 0.0 {
+                return Rate::SILENT;
+            }
+            let rate = bounded(self.gain * x);
+            return Rate::bounded(rate, [rate, -self.gain, 0.0]);
+        }
+        let r = ramp(x, self.noise);
+        let rate = bounded(self.gain * r.value);
+        Rate::bounded(rate, [rate, -self.gain * r.above, self.gain * r.spread])
+    }
+
+    fn natural(parameters: &[f64; 3], units: Units) -> [f64; 3] {
+        [
+            parameters[0].exp() * units.rate / units.drive,
+            units.drive * parameters[1],
+            units.drive * parameters[2].exp(),
+        ]
+    }
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn the_prepared_curve_is_the_same_and_always_finite() {
+        use super::super::testing::{always_finite, derivatives_match};
+        derivatives_match::<3, SmoothedRamp>([-0.4, 0.3, -2.0], &[0.1, 0.3, 0.4, 5.0]);
+        always_finite::<3, SmoothedRamp>([
+            &[-700.0, 0.0, 20.0, 700.0],
+            &[-1e300, 0.0, 1.0],
+            &[-700.0, -3.0, 0.0, 700.0],
+        ]);
+        let at = SmoothedRamp::new(&[0.2_f64.ln(), 100.0, 25.0_f64.ln()]).at(110.0);
+        let r = ramp(10.0, 25.0);
+        assert!((at.rate - 0.2 * r.value).abs() < 1e-13);
+        assert!((at.derivatives[2] - 0.2 * r.spread).abs() < 1e-13);
+    }
 
     #[test]
     fn derivatives_match_differences() {

@@ -11,6 +11,7 @@ pub mod objective;
 mod profile;
 mod resample_fit;
 pub mod rival_fit;
+mod rival_starts;
 pub mod robust;
 pub mod solver;
 mod starts;
@@ -19,7 +20,8 @@ pub use bootstrap::{Bootstrap, BootstrapInterval, BootstrapKind, BootstrapSettin
 pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
+pub use leave_one_out::{LeftOut, NotPredicted, leave_one_level_out};
 pub use objective::Point;
 pub use profile::{Side, SideSearch};
-pub use rival_fit::{NoRival, RivalFit, fit_rival};
+pub use rival_fit::{RivalFit, Unfitted, fit_rival};
 pub use robust::{Robust, robust};

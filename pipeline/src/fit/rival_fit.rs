@@ -1,568 +1,799 @@
-//! Fits of the rival rate functions to the levels and weights of the main fit.
+//! The fit of any rate function to the points of one response: the rivals by a search of their own, the main one by
+//! [`main_fit`].
 //!
-//! Every rival sees the same points with the same weights 1/(e^2 + w^2). A free threshold makes the cost of a curve
-//! without noise fall apart into pieces between neighbouring drives, with a minimum in several of them, and for curves
-//! that start with an infinite slope also exactly at a drive whose level is silent. So starts lie between and at the
-//! drives around the onset, each with its best scale, and the best few are followed.
+//! Every rival is searched in units of its own cell (drives over their range, rates over the peak), with the same
+//! weights and the same equation for the extra variance as the main fit.
+//!
+//! A curve with a kink at a free threshold has a cost that is smooth between neighbouring drives only, with a local
+//! minimum in many of these gaps and some minima exactly on a drive, where the slope may even be infinite. So each gap
+//! is a bounded problem of its own; one start or more lies in every gap that can hold the minimum, the best few are
+//! followed, and a search that ends on a drive is continued on its other side.
 
-use super::leave_one_out::{LeftOut, leave_one_level_out};
-use super::main_fit::covariance;
-use super::objective::Levels;
+use super::extra_sd::extra_variance;
+use super::main_fit::{self, MainFit, Scatter, covariance};
+use super::objective::{Chart, Levels, Point, evaluate};
+use super::rival_starts::{Start, Starts};
 use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions, minimise};
-use crate::curve::Curve;
-use crate::curve::hill::hill;
-use crate::curve::hyperbola::hyperbola;
-use crate::curve::logistic::logistic;
-use crate::curve::ramp::ramp;
-use crate::curve::refractory_integrator::refractory_integrator;
-use crate::curve::square_root::square_root;
+use crate::curve::hill::Hill;
+use crate::curve::hyperbola::GainCeiling;
+use crate::curve::logistic::Logistic;
+use crate::curve::ramp::Ramp;
+use crate::curve::refractory_integrator::RefractoryIntegrator;
+use crate::curve::smoothed_ramp::SmoothedRamp;
+use crate::curve::square_root::SquareRoot;
+use crate::curve::{Curve, RateFunction, Units};
 
-/// Starts followed to their minimum, of those with a free threshold and of those with one held at a drive.
-const FOLLOWED: [usize; 2] = [5, 2];
-/// Most thresholds tried.
-const THRESHOLDS: usize = 10;
-/// Thresholds below the smallest drive that are tried when that already fires, as fractions of the range of drives.
-const BELOW: [f64; 3] = [0.05, 0.3, 1.0];
-/// Smallest threshold: this many ranges below the smallest drive.
-const THRESHOLD_BELOW: f64 = 10.0;
-/// Half-rises and widths tried, as fractions of the drives above threshold.
-const WIDTHS: [f64; 4] = [0.05, 0.2, 0.7, 3.0];
-/// Hill exponents tried.
-const EXPONENTS: [f64; 3] = [0.6, 1.5, 4.0];
-/// Smallest and largest exponent.
-const EXPONENT_BOUNDS: [f64; 2] = [0.05, 50.0];
-/// Smallest and largest scale in Hz, half-rise and width, as multiples of the peak rate and the range of drives.
-const WIDE: [f64; 2] = [1e-6, 1e6];
+/// Most parameters that a curve has.
+pub const MOST_PARAMETERS: usize = 4;
 
-/// One rate function with parameters found.
-#[derive(Clone, Debug, PartialEq)]
-pub struct RivalFit {
-    /// Which.
-    pub curve: Curve,
-    /// Name and value of each parameter: rates in Hz, drives in the unit of the drive, times in s.
-    pub values: Vec<(&'static str, f64)>,
-    /// Names of the parameters that ended on a bound of the search.
-    pub at_bound: Vec<&'static str>,
-    /// Fitted rate of each level, Hz.
-    pub level_rates: Vec<f64>,
-    /// Leverage of each level, 0 to 1; empty where the curvature is singular.
-    pub leverage: Vec<f64>,
-    /// Weighted sum of squares.
-    pub cost: f64,
-    /// Rates of the levels predicted without them; not computed unless asked for.
-    pub left_out: Option<LeftOut>,
-    /// Whether the search met its tolerance.
-    pub converged: bool,
-    /// Passes over the levels.
-    pub evaluations: u64,
-    chart: Chart,
+/// Starts, in different gaps where there are gaps, that are followed to a local minimum.
+const STARTS_FOLLOWED: usize = 5;
+
+/// Rise of the cost beyond twice the best above which a gap holds no start worth following.
+const HOPELESS: f64 = 10.0;
+
+/// A rough search that ends above the best by more than this factor is not taken to its minimum.
+const PROMISING: f64 = 1.15;
+
+/// Times that the search may switch to another local minimum once the weights have changed.
+const SWITCHES: usize = 6;
+
+/// Rounds of curve and extra variance before the fit gives up.
+const ROUNDS: usize = 200;
+
+/// The extra variance has settled once it moves by less than this fraction of the total variance.
+const SETTLED: f64 = 1e-7;
+
+/// Why a curve has no fit to a cell.
+#[derive(Clone, Debug, PartialEq, thiserror::Error)]
+pub enum Unfitted {
+    /// No more points than parameters.
+    #[error("{points} steps; {curve} has {} parameters and needs {needed} steps", needed - 1)]
+    TooFewPoints {
+        /// The curve.
+        curve: Curve,
+        /// Points there are.
+        points: usize,
+        /// Points it takes.
+        needed: usize,
+    },
+    /// Fewer distinct drives than parameters.
+    #[error("{levels} distinct drives; {curve} has {needed} parameters and needs as many")]
+    TooFewLevels {
+        /// The curve.
+        curve: Curve,
+        /// Distinct drives there are.
+        levels: usize,
+        /// Distinct drives it takes.
+        needed: usize,
+    },
+    /// All rates are zero.
+    #[error("no step has a rate above zero")]
+    NoRate,
+    /// The curve is defined for positive drives only, and too few are.
+    #[error(
+        "{curve} counts drive from rest and needs {needed} distinct drives above zero, of which there are {levels}"
+    )]
+    TooFewPositiveDrives {
+        /// The curve.
+        curve: Curve,
+        /// Distinct positive drives.
+        levels: usize,
+        /// Distinct positive drives it takes.
+        needed: usize,
+    },
+    /// A number that is not finite, a standard error that is not positive, or scales that no arithmetic holds.
+    #[error(
+        "drive {drive}, rate {rate} Hz, standard error {se} Hz: not a point that a curve can be fitted to"
+    )]
+    BadPoint {
+        /// Drive.
+        drive: f64,
+        /// Rate, Hz.
+        rate: f64,
+        /// Standard error, Hz.
+        se: f64,
+    },
+    /// The points are not sorted by drive.
+    #[error("the points are not in order of drive")]
+    NotSorted,
+    /// Search and extra variance did not come to rest together.
+    #[error("the search for the best {curve} did not settle in {evaluations} passes over the points")]
+    NotSettled {
+        /// The curve.
+        curve: Curve,
+        /// Passes over the points.
+        evaluations: u64,
+    },
 }
 
-/// Parameters in the chart of the search.
-#[derive(Clone, Copy, Debug, PartialEq)]
-enum Chart {
-    Hyperbola([f64; 3]),
-    Ramp([f64; 2]),
-    Logistic([f64; 3]),
-    Hill([f64; 4]),
-    RefractoryIntegrator([f64; 3]),
-    SquareRoot([f64; 2]),
+impl Unfitted {
+    /// Passes over the points that were made before the curve was given up.
+    pub fn evaluations(&self) -> u64 {
+        match self {
+            Self::NotSettled { evaluations, .. } => *evaluations,
+            _ => 0,
+        }
+    }
+}
+
+/// A rate function fitted to the points of one response.
+#[derive(Clone, Debug)]
+pub struct RivalFit {
+    /// Which curve.
+    pub curve: Curve,
+    /// Estimates in natural units, in the order of [`Curve::parameter_names`]; infinite where the best curve has no
+    /// ceiling or no leak.
+    pub values: Vec<f64>,
+    /// Names of the parameters that rest on a limit of the search, infinite ones included. A threshold that rests on
+    /// one of the drives, where the cost has a kink, is not among them.
+    pub at_bound: Vec<&'static str>,
+    /// Fitted rate of each point, Hz.
+    pub fitted: Vec<f64>,
+    /// Leverage of its level for each point: the share of the level's own mean in its fitted value, 0 to 1. Empty
+    /// where the points do not determine the parameters. For a threshold that rests on a drive it is that of the
+    /// curve with the threshold held.
+    pub leverage: Vec<f64>,
+    /// Extra variance, Hz^2.
+    pub extra_variance: f64,
+    /// Weighted sum of squares, sum (rate - curve)^2/(se^2 + extra variance).
+    pub cost: f64,
+    /// Whether search and extra variance came to rest. Always so for a rival; the main fit may not have.
+    pub converged: bool,
+    /// Passes of the curve over the levels.
+    pub evaluations: u64,
+    /// Chart parameters (unused ones zero), in `units`.
+    pub(super) chart: [f64; MOST_PARAMETERS],
+    pub(super) units: Units,
+    /// Settings of the last search, for refits from here.
+    pub(super) held: [bool; MOST_PARAMETERS],
+    pub(super) main: Option<SolverOptions<4>>,
 }
 
 impl RivalFit {
-    /// The fitted rate in Hz at `drive` (pA or nS).
+    /// Names and estimates, in natural units.
+    pub fn parameters(&self) -> impl Iterator<Item = (&'static str, f64)> + '_ {
+        self.curve
+            .parameter_names()
+            .iter()
+            .copied()
+            .zip(self.values.iter().copied())
+    }
+
+    /// Fitted rate in Hz at any drive.
     pub fn rate_at(&self, drive: f64) -> f64 {
-        match &self.chart {
-            Chart::Hyperbola(p) => hyperbola(drive, p).rate,
-            Chart::Ramp(p) => ramp(drive, p).0,
-            Chart::Logistic(p) => logistic(drive, p).0,
-            Chart::Hill(p) => hill(drive, p).0,
-            Chart::RefractoryIntegrator(p) => refractory_integrator(drive, p).0,
-            Chart::SquareRoot(p) => square_root(drive, p).0,
+        fn at<const P: usize, R: RateFunction<P>>(fit: &RivalFit, drive: f64) -> f64 {
+            let parameters: [f64; P] = std::array::from_fn(|i| fit.chart[i]);
+            R::new(&parameters).at(drive / fit.units.drive).rate * fit.units.rate
+        }
+        match self.curve {
+            Curve::SmoothedHyperbola => {
+                let mut rate = f64::NAN;
+                evaluate(Chart::Ceiling, &self.chart, &[drive], |_, f, _| rate = f);
+                rate
+            }
+            Curve::Hyperbola => at::<3, GainCeiling>(self, drive),
+            Curve::SmoothedRamp => at::<3, SmoothedRamp>(self, drive),
+            Curve::Ramp => at::<2, Ramp>(self, drive),
+            Curve::Logistic => at::<3, Logistic>(self, drive),
+            Curve::Hill => at::<4, Hill>(self, drive),
+            Curve::RefractoryIntegrator => at::<3, RefractoryIntegrator>(self, drive),
+            Curve::SquareRoot => at::<2, SquareRoot>(self, drive),
+        }
+    }
+
+    /// The main fit in the same form. `points` are those it was fitted to.
+    pub fn of_main(points: &[Point], main: &MainFit) -> Self {
+        let p = main.solution.parameters;
+        let mut at_level = vec![(0.0, 0.0); main.levels.drives.len()];
+        let covariance = main.covariance();
+        evaluate(Chart::Ceiling, &p, &main.levels.drives, |i, rate, derivatives| {
+            let variance = covariance.map_or(0.0, |c| spread(&c, derivatives));
+            at_level[i] = (rate, variance * main.levels.root_weights[i].powi(2));
+        });
+        let held = main.solution.at_bound;
+        let names = Curve::SmoothedHyperbola.parameter_names();
+        // The chart's (gain, ceiling) are max rate and half-rise: a gain at its limit is told as the half-rise's.
+        let of_chart = [names[1], names[0], names[2], names[3]];
+        let (fitted, leverage): (Vec<f64>, Vec<f64>) =
+            main.levels.level_of_point().map(|l| at_level[l]).unzip();
+        debug_assert_eq!(fitted.len(), points.len());
+        Self {
+            curve: Curve::SmoothedHyperbola,
+            values: vec![1.0 / p[1], p[0] / p[1], p[2], p[3].exp()],
+            at_bound: (0..4).filter(|i| held[*i]).map(|i| of_chart[i]).collect(),
+            fitted,
+            leverage: if covariance.is_some() {
+                leverage
+            } else {
+                Vec::new()
+            },
+            extra_variance: main.extra_variance,
+            cost: main.solution.cost(),
+            converged: main.converged,
+            evaluations: main.evaluations,
+            chart: p,
+            units: Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+            held,
+            main: Some(main.options),
         }
     }
 }
 
-/// Why a rate function has no fit.
-#[derive(Clone, Debug, PartialEq, Eq, thiserror::Error)]
-pub enum NoRival {
-    /// The curve belongs to the main fit and comes with it.
-    #[error("the curve is part of the main fit")]
-    Main,
-    /// Fewer distinct drives than parameters.
-    #[error("{levels} drives for {parameters} parameters")]
-    TooFewLevels {
-        /// Distinct drives.
-        levels: usize,
-        /// Parameters.
-        parameters: usize,
-    },
-    /// All rates are zero.
-    #[error("no rate above zero")]
-    Silent,
-    /// A curve that needs positive drives was asked of a cell without rates there.
-    #[error("no rate at a positive drive")]
-    NoPositiveDrive,
-}
-
-/// Fits `curve` to `levels` with the weights they carry.
+/// Fits `curve` to `points`, which must be sorted by drive; the extra variance estimated with it or held, as in
+/// [`main_fit::fit`].
 ///
 /// # Errors
-/// The question has no answer: see [`NoRival`]. A search that did not settle is no error; it says so.
-pub fn fit_rival(curve: Curve, levels: &Levels, leave_out: bool) -> Result<RivalFit, NoRival> {
-    let (parameters, count) = (curve.parameters(), levels.drives.len());
-    let peak = levels.rates.iter().copied().fold(0.0, f64::max);
-    if count < parameters || count < 2 {
-        return Err(NoRival::TooFewLevels {
-            levels: count,
-            parameters,
+/// In words why the curve has no fit: too few points or drives for its parameters, no rate above zero, points that are
+/// not numbers or not in order, or a search that did not settle.
+pub fn fit_rival(curve: Curve, points: &[Point], scatter: Scatter) -> Result<RivalFit, Unfitted> {
+    match curve {
+        Curve::SmoothedHyperbola => {
+            check(curve, points)?;
+            let main = main_fit::fit(points, scatter).ok_or(Unfitted::NoRate)?;
+            if main.converged {
+                Ok(RivalFit::of_main(points, &main))
+            } else {
+                Err(Unfitted::NotSettled {
+                    curve,
+                    evaluations: main.evaluations,
+                })
+            }
+        }
+        Curve::Hyperbola => fit_as::<3, GainCeiling>(points, scatter),
+        Curve::SmoothedRamp => fit_as::<3, SmoothedRamp>(points, scatter),
+        Curve::Ramp => fit_as::<2, Ramp>(points, scatter),
+        Curve::Logistic => fit_as::<3, Logistic>(points, scatter),
+        Curve::Hill => fit_as::<4, Hill>(points, scatter),
+        Curve::RefractoryIntegrator => fit_as::<3, RefractoryIntegrator>(points, scatter),
+        Curve::SquareRoot => fit_as::<2, SquareRoot>(points, scatter),
+    }
+}
+
+/// What every curve asks of the points; the units of the search.
+fn check(curve: Curve, points: &[Point]) -> Result<Units, Unfitted> {
+    let (needed, parameters) = (curve.fewest_points(), curve.parameters());
+    if points.len() < needed {
+        return Err(Unfitted::TooFewPoints {
+            curve,
+            points: points.len(),
+            needed,
         });
     }
-    if !(peak > 0.0) {
-        return Err(NoRival::Silent);
+    let peak = points.iter().map(|p| p.rate).fold(0.0, f64::max);
+    let lowest = points.iter().map(|p| p.drive).fold(f64::INFINITY, f64::min);
+    let highest = points.iter().map(|p| p.drive).fold(f64::NEG_INFINITY, f64::max);
+    let range = highest - lowest;
+    let sane = |value: f64| value.abs() < 1e100;
+    for p in points {
+        let relative = if peak > 0.0 { p.se / peak } else { p.se };
+        if !(sane(p.drive) && sane(p.rate) && relative > 1e-100 && relative < 1e100) {
+            return Err(Unfitted::BadPoint {
+                drive: p.drive,
+                rate: p.rate,
+                se: p.se,
+            });
+        }
     }
-    let ground = Ground::new(levels, peak, leave_out);
-    match curve {
-        Curve::SmoothedHyperbola | Curve::SmoothedRamp => Err(NoRival::Main),
-        Curve::Hyperbola => Ok(ground.hyperbola()),
-        Curve::Ramp => Ok(ground.ramp()),
-        Curve::Logistic => Ok(ground.logistic()),
-        Curve::Hill => Ok(ground.hill()),
-        Curve::RefractoryIntegrator => ground.refractory_integrator(),
-        Curve::SquareRoot => Ok(ground.square_root()),
+    if !points.is_sorted_by(|a, b| a.drive <= b.drive) {
+        return Err(Unfitted::NotSorted);
+    }
+    let distinct = |above: f64| {
+        points
+            .chunk_by(|a, b| a.drive == b.drive)
+            .filter(|level| level[0].drive > above)
+            .count()
+    };
+    let levels = distinct(f64::NEG_INFINITY);
+    // Drives so close together that their ratio to the range is lost are one drive.
+    if levels < parameters || !(range > 1e-100) || !(range > 1e-12 * lowest.abs().max(highest.abs())) {
+        return Err(Unfitted::TooFewLevels {
+            curve,
+            levels,
+            needed: parameters,
+        });
+    }
+    if !(peak > 1e-100) {
+        return Err(Unfitted::NoRate);
+    }
+    if curve == Curve::RefractoryIntegrator && distinct(0.0) < parameters {
+        return Err(Unfitted::TooFewPositiveDrives {
+            curve,
+            levels: distinct(0.0),
+            needed: parameters,
+        });
+    }
+    Ok(Units {
+        drive: range,
+        rate: peak,
+    })
+}
+
+/// A rival as the search needs it.
+pub(super) trait Rival<const P: usize>: RateFunction<P> + Starts<P> {}
+
+impl<const P: usize, R: RateFunction<P> + Starts<P>> Rival<P> for R {}
+
+fn fit_as<const P: usize, R: Rival<P>>(points: &[Point], scatter: Scatter) -> Result<RivalFit, Unfitted> {
+    let units = check(R::CURVE, points)?;
+    let scaled = scale_points(points, units);
+    let first = match scatter {
+        // Only ranks the starts and is replaced at once.
+        Scatter::Estimated => 0.05_f64.powi(2),
+        Scatter::Held(variance) => variance / units.rate.powi(2),
+    };
+    let levels = Levels::new(&scaled, first);
+    let mut search = Search::<P> {
+        estimated: matches!(scatter, Scatter::Estimated),
+        points: &scaled,
+        options: options::<P, R>(&levels),
+        variance: first,
+        levels,
+        evaluations: 0,
+        fitted: Vec::new(),
+        residuals: Vec::new(),
+    };
+    let not_settled = |evaluations| Unfitted::NotSettled {
+        curve: R::CURVE,
+        evaluations,
+    };
+    let Some((solution, converged)) = search.run::<R>() else {
+        return Err(not_settled(search.evaluations));
+    };
+    if !converged {
+        return Err(not_settled(search.evaluations));
+    }
+    Ok(search.report::<R>(&solution, units))
+}
+
+/// Drives over their range, rates and errors over the peak.
+pub(super) fn scale_points(points: &[Point], units: Units) -> Vec<Point> {
+    points
+        .iter()
+        .map(|p| Point {
+            drive: p.drive / units.drive,
+            rate: p.rate / units.rate,
+            se: p.se / units.rate,
+        })
+        .collect()
+}
+
+/// Limits and stopping rules of a search without regard to gaps, in units of the cell.
+pub(super) fn options<const P: usize, R: Rival<P>>(levels: &Levels) -> SolverOptions<P> {
+    let (lowest, highest) = ends(levels);
+    let (lower, upper) = R::bounds(lowest, highest);
+    SolverOptions {
+        lower,
+        upper,
+        decrease_tolerance: 1e-11,
+        step_tolerance: 1e-12,
+        max_iterations: 400,
+        ..SolverOptions::default()
     }
 }
 
-/// What all fits of one cell share.
-struct Ground<'a> {
-    levels: &'a Levels,
-    peak: f64,
-    range: f64,
-    lowest: f64,
-    highest: f64,
-    /// Thresholds to start from: between drives, and at them.
-    between: Vec<f64>,
-    at_drives: Vec<f64>,
-    leave_out: bool,
+/// Lowest and highest drive.
+pub(super) fn ends(levels: &Levels) -> (f64, f64) {
+    match (levels.drives.first(), levels.drives.last()) {
+        (Some(first), Some(last)) => (*first, *last),
+        _ => (0.0, 0.0),
+    }
 }
 
-/// One curve's part in the search.
-struct Plan<const P: usize> {
-    curve: Curve,
-    names: [&'static str; P],
-    /// Which parameter is the threshold.
-    threshold: Option<usize>,
-    lower: [f64; P],
-    upper: [f64; P],
-    stride: [f64; P],
-    /// Starts; the first parameter is the logarithm of the scale where `scaled`, and is replaced by the best.
-    starts: Vec<[f64; P]>,
-    scaled: bool,
-    /// Whether a minimum may lie with the threshold exactly at a drive.
-    kinked: bool,
-    at: fn(f64, &[f64; P]) -> (f64, [f64; P]),
-    chart: fn([f64; P]) -> Chart,
-    /// Natural values of the parameters.
-    natural: fn(&[f64; P]) -> [f64; P],
+/// The weighted sum of squares of one curve over levels.
+pub(super) struct Cost<'a, R> {
+    pub(super) levels: &'a Levels,
+    pub(super) curve: std::marker::PhantomData<R>,
 }
 
-struct Problem<'a, const P: usize> {
-    levels: &'a Levels,
-    at: fn(f64, &[f64; P]) -> (f64, [f64; P]),
+impl<'a, R> Cost<'a, R> {
+    pub(super) fn new(levels: &'a Levels) -> Self {
+        Self {
+            levels,
+            curve: std::marker::PhantomData,
+        }
+    }
 }
 
-impl<const P: usize> LeastSquares<P> for Problem<'_, P> {
+impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
+    #[inline]
     fn accumulate(&self, parameters: &[f64; P], sums: &mut NormalSums<P>) {
         let l = self.levels;
         sums.cost = l.within;
-        for ((drive, rate), root) in l.drives.iter().zip(&l.rates).zip(&l.root_weights) {
-            let (fitted, slopes) = (self.at)(*drive, parameters);
-            sums.add(root * (rate - fitted), &slopes.map(|s| root * s));
+        let curve = R::new(parameters);
+        for ((drive, rate), w) in l.drives.iter().zip(&l.rates).zip(&l.root_weights) {
+            let at = curve.at(*drive);
+            sums.add(w * (rate - at.rate), &at.derivatives.map(|d| w * d));
+        }
+        // A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an
+        // all but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its
+        // gradient is touched, so the minimum stays where it is.
+        let floor = CURVATURE_FLOOR * l.root_weights.iter().map(|w| w * w).sum::<f64>();
+        for i in 0..P {
+            sums.curvature[i][i] += floor;
         }
     }
 }
 
-impl<'a> Ground<'a> {
-    fn new(levels: &'a Levels, peak: f64, leave_out: bool) -> Self {
-        let (lowest, highest) = (levels.drives[0], levels.drives[levels.drives.len() - 1]);
-        let range = highest - lowest;
-        let first = |fraction: f64| {
-            levels
-                .rates
-                .iter()
-                .position(|r| *r > fraction * peak)
-                .unwrap_or(0)
+/// Least curvature of a parameter, as a fraction of what it has where one unit of it changes every rate by the peak.
+const CURVATURE_FLOOR: f64 = 1e-13;
+
+/// The gap (index of the drive above it) in which a threshold lies; one that is on a drive belongs to the gap above.
+fn gap_of(drives: &[f64], threshold: f64) -> usize {
+    drives.partition_point(|d| *d <= threshold).min(drives.len() - 1)
+}
+
+/// Puts the bounds of the threshold to the ends of gap `gap`.
+fn enter_gap<const P: usize>(
+    options: &SolverOptions<P>,
+    index: usize,
+    drives: &[f64],
+    gap: usize,
+) -> SolverOptions<P> {
+    let mut inside = *options;
+    if gap > 0 {
+        inside.lower[index] = options.lower[index].max(drives[gap - 1]);
+    }
+    inside.upper[index] = options.upper[index].min(drives[gap]);
+    inside
+}
+
+/// From `start` down to a minimum: the threshold of a curve with a kink is kept between two drives, and where the
+/// search ends on one of them it goes on in the next gap for as long as that lowers the cost. `drives` are those that
+/// have weight.
+pub(super) fn descend<const P: usize, R: Rival<P>>(
+    cost: &Cost<'_, R>,
+    drives: &[f64],
+    start: [f64; P],
+    options: &SolverOptions<P>,
+    evaluations: &mut u64,
+) -> Solution<P> {
+    let Some(index) = R::THRESHOLD else {
+        let found = minimise(cost, start, options);
+        *evaluations += found.evaluations;
+        return found;
+    };
+    let mut gap = gap_of(drives, start[index]);
+    let inside = enter_gap(options, index, drives, gap);
+    let mut best = minimise(cost, start, &inside);
+    *evaluations += best.evaluations;
+    let mut bounds = inside;
+    // Each move lowers the cost or turns an unfinished search into a finished one; the gaps bound their number.
+    for _ in 0..drives.len() {
+        let at = best.parameters[index];
+        let width = bounds.upper[index] - bounds.lower[index];
+        let close = |bound: f64| (at - bound).abs() <= 1e-9 * width;
+        let (next, from) = if close(bounds.upper[index]) && gap + 1 < drives.len() {
+            (gap + 1, bounds.upper[index])
+        } else if close(bounds.lower[index]) && gap > 0 && bounds.lower[index] > options.lower[index] {
+            (gap - 1, bounds.lower[index])
+        } else {
+            break;
         };
-        // From two levels below the first rate to the level of half the peak.
-        let (from, to) = (first(0.0).saturating_sub(2), first(0.5).max(1));
-        let middles: Vec<f64> = levels.drives[from..=to]
-            .windows(2)
-            .map(|pair| 0.5 * (pair[0] + pair[1]))
-            .collect();
-        let every = middles.len().div_ceil(THRESHOLDS).max(1);
-        let mut between: Vec<f64> = middles.into_iter().step_by(every).collect();
-        if levels.rates[0] > 0.0 {
-            between.extend(BELOW.map(|below| lowest - below * range));
+        let inside = enter_gap(options, index, drives, next);
+        let mut start = best.parameters;
+        start[index] = from;
+        let found = minimise(cost, start, &inside);
+        *evaluations += found.evaluations;
+        // From below, the side of a drive on which its point is silent says whether the kink is a minimum.
+        let settles = next > gap && found.converged && found.cost() <= best.cost() * (1.0 + 1e-12);
+        if !(found.cost() < best.cost() * (1.0 - 1e-12) || settles) {
+            break;
         }
-        let at_drives = levels.drives[from..to].to_vec();
-        Self {
-            levels,
-            peak,
-            range,
-            lowest,
-            highest,
-            between,
-            at_drives,
-            leave_out,
+        let stays = found.parameters[index] == from;
+        best = found;
+        bounds = inside;
+        gap = next;
+        if stays && settles {
+            // A kink approached from below: done, it was left only because it lowers the cost no further below.
+            break;
         }
     }
+    // A threshold on a drive is a kink, not a limit of the search; it is held, though, for the covariance.
+    best
+}
 
-    fn scale_bounds(&self) -> [f64; 2] {
-        WIDE.map(|w| (w * self.peak).ln())
+struct Search<'a, const P: usize> {
+    estimated: bool,
+    points: &'a [Point],
+    options: SolverOptions<P>,
+    variance: f64,
+    levels: Levels,
+    evaluations: u64,
+    fitted: Vec<f64>,
+    residuals: Vec<f64>,
+}
+
+impl<const P: usize> Search<'_, P> {
+    fn descend<R: Rival<P>>(&mut self, start: [f64; P], options: &SolverOptions<P>) -> Solution<P> {
+        descend(
+            &Cost::<R>::new(&self.levels),
+            &self.levels.drives,
+            start,
+            options,
+            &mut self.evaluations,
+        )
     }
 
-    fn width_bounds(&self) -> [f64; 2] {
-        WIDE.map(|w| (w * self.range).ln())
-    }
-
-    fn threshold_bounds(&self) -> [f64; 2] {
-        [self.lowest - THRESHOLD_BELOW * self.range, self.highest]
-    }
-
-    fn thresholds(&self) -> impl Iterator<Item = f64> + '_ {
-        self.between.iter().chain(&self.at_drives).copied()
-    }
-
-    fn hyperbola(&self) -> RivalFit {
-        let (scale, width, threshold) = (self.scale_bounds(), self.width_bounds(), self.threshold_bounds());
-        let mut starts = Vec::new();
-        for t in self.thresholds() {
-            starts.extend(WIDTHS.map(|w| [0.0, (w * (self.highest - t)).ln(), t]));
-        }
-        self.search(&Plan {
-            curve: Curve::Hyperbola,
-            names: ["max_rate", "half_rise", "threshold"],
-            threshold: Some(2),
-            lower: [scale[0], width[0], threshold[0]],
-            upper: [scale[1], width[1], threshold[1]],
-            stride: [1.0, 1.0, 0.25 * self.range],
-            starts,
-            scaled: true,
-            kinked: false,
-            at: |drive, p| {
-                let at = hyperbola(drive, p);
-                (at.rate, at.derivatives)
-            },
-            chart: Chart::Hyperbola,
-            natural: |p| [p[0].exp(), p[1].exp(), p[2]],
-        })
-    }
-
-    fn ramp(&self) -> RivalFit {
-        let threshold = self.threshold_bounds();
-        let gain = WIDE.map(|w| (w * self.peak / self.range).ln());
-        self.search(&Plan {
-            curve: Curve::Ramp,
-            names: ["gain", "threshold"],
-            threshold: Some(1),
-            lower: [gain[0], threshold[0]],
-            upper: [gain[1], threshold[1]],
-            stride: [1.0, 0.25 * self.range],
-            starts: self.thresholds().map(|t| [0.0, t]).collect(),
-            scaled: true,
-            kinked: false,
-            at: ramp,
-            chart: Chart::Ramp,
-            natural: |p| [p[0].exp(), p[1]],
-        })
-    }
-
-    fn square_root(&self) -> RivalFit {
-        let threshold = self.threshold_bounds();
-        let scale = WIDE.map(|w| (w * self.peak / self.range.sqrt()).ln());
-        self.search(&Plan {
-            curve: Curve::SquareRoot,
-            names: ["scale", "threshold"],
-            threshold: Some(1),
-            lower: [scale[0], threshold[0]],
-            upper: [scale[1], threshold[1]],
-            stride: [1.0, 0.25 * self.range],
-            starts: self.thresholds().map(|t| [0.0, t]).collect(),
-            scaled: true,
-            kinked: true,
-            at: square_root,
-            chart: Chart::SquareRoot,
-            natural: |p| [p[0].exp(), p[1]],
-        })
-    }
-
-    fn logistic(&self) -> RivalFit {
-        let (scale, width) = (self.scale_bounds(), self.width_bounds());
-        let mut starts = Vec::new();
-        for part in [0.1, 0.3, 0.5, 0.7, 1.0, 2.0] {
-            let middle = self.lowest + part * self.range;
-            starts.extend(WIDTHS.map(|w| [0.0, middle, (0.5 * w * self.range).ln()]));
-        }
-        self.search(&Plan {
-            curve: Curve::Logistic,
-            names: ["max_rate", "middle", "width"],
-            threshold: None,
-            lower: [scale[0], self.lowest - 10.0 * self.range, width[0]],
-            upper: [scale[1], self.highest + 10.0 * self.range, width[1]],
-            stride: [1.0, 0.25 * self.range, 1.0],
-            starts,
-            scaled: true,
-            kinked: false,
-            at: logistic,
-            chart: Chart::Logistic,
-            natural: |p| [p[0].exp(), p[1], p[2].exp()],
-        })
-    }
-
-    fn hill(&self) -> RivalFit {
-        let (scale, width, threshold) = (self.scale_bounds(), self.width_bounds(), self.threshold_bounds());
-        let exponent = EXPONENT_BOUNDS.map(f64::ln);
-        let mut starts = Vec::new();
-        for t in self.thresholds() {
-            for n in EXPONENTS {
-                starts.extend(
-                    WIDTHS[1..]
-                        .iter()
-                        .map(|w| [0.0, (w * (self.highest - t)).ln(), t, n.ln()]),
-                );
-            }
-        }
-        self.search(&Plan {
-            curve: Curve::Hill,
-            names: ["max_rate", "half_rise", "threshold", "exponent"],
-            threshold: Some(2),
-            lower: [scale[0], width[0], threshold[0], exponent[0]],
-            upper: [scale[1], width[1], threshold[1], exponent[1]],
-            stride: [1.0, 1.0, 0.25 * self.range, 0.5],
-            starts,
-            scaled: true,
-            kinked: true,
-            at: hill,
-            chart: Chart::Hill,
-            natural: |p| [p[0].exp(), p[1].exp(), p[2], p[3].exp()],
-        })
-    }
-
-    fn refractory_integrator(&self) -> Result<RivalFit, NoRival> {
-        let l = self.levels;
-        if !l.drives.iter().zip(&l.rates).any(|(d, r)| *d > 0.0 && *r > 0.0) {
-            return Err(NoRival::NoPositiveDrive);
-        }
-        let least = 1e-6 * self.highest;
-        let mut starts = Vec::new();
-        let first = l
-            .drives
-            .iter()
-            .copied()
-            .find(|d| *d > 0.0)
-            .unwrap_or(self.highest);
-        let close = [0.02, 0.3, 0.9].map(|part| part * first);
-        for t in self.thresholds().filter(|t| *t > least).chain(close) {
-            // 1/rate = t_ref + tau L is a straight line in L.
-            let (mut s, mut sx, mut sy, mut sxx, mut sxy) = (0.0, 0.0, 0.0, 0.0, 0.0);
-            for ((d, r), root) in l.drives.iter().zip(&l.rates).zip(&l.root_weights) {
-                if *d > t && *r > 0.0 {
-                    let (x, y, w) = ((t / (d - t)).ln_1p(), 1.0 / r, (root * r * r).powi(2));
-                    (s, sx, sy) = (s + w, sx + w * x, sy + w * y);
-                    (sxx, sxy) = (sxx + w * x * x, sxy + w * x * y);
-                }
-            }
-            let slope = (s * sxy - sx * sy) / (s * sxx - sx * sx);
-            let free = if slope.is_finite() && slope > 0.0 {
-                slope
-            } else {
-                sy / sx
-            };
-            let t_ref = (sy - free * sx) / s;
-            let (tau, t_ref) = if t_ref >= 0.0 {
-                (free, t_ref)
-            } else {
-                (sy / sx, 0.0)
-            };
-            if tau.is_finite() && tau > 0.0 && t_ref.is_finite() {
-                starts.push([tau.ln(), t_ref, t]);
-            }
-        }
-        let tau = [1e-6 / self.peak, 1e6 / self.peak].map(f64::ln);
-        Ok(self.search(&Plan {
-            curve: Curve::RefractoryIntegrator,
-            names: ["tau", "t_ref", "threshold"],
-            threshold: Some(2),
-            lower: [tau[0], 0.0, least],
-            upper: [tau[1], 1e3 / self.peak, self.highest],
-            stride: [1.0, 0.5 / self.peak, 0.25 * self.range],
-            starts,
-            scaled: false,
-            kinked: true,
-            at: refractory_integrator,
-            chart: Chart::RefractoryIntegrator,
-            natural: |p| [p[0].exp(), p[1], p[2]],
-        }))
-    }
-
-    /// Ranks the starts, follows the best and takes the lowest minimum.
-    fn search<const P: usize>(&self, plan: &Plan<P>) -> RivalFit {
-        let l = self.levels;
-        let problem = Problem {
-            levels: l,
-            at: plan.at,
-        };
-        let options = SolverOptions {
-            lower: plan.lower,
-            upper: plan.upper,
-            stride: plan.stride,
-            decrease_tolerance: 1e-11,
-            step_tolerance: 1e-12,
-            max_iterations: 200,
-            ..SolverOptions::default()
-        };
-        let held_at_drive = |p: &[f64; P]| {
-            plan.threshold
-                .is_some_and(|t| self.at_drives.iter().any(|d| *d == p[t]))
-        };
-        let mut ranked: Vec<(f64, [f64; P])> = plan
-            .starts
-            .iter()
-            .filter(|start| plan.kinked || !held_at_drive(start))
-            .filter_map(|start| self.scaled(plan, *start))
-            .collect();
-        let mut evaluations = ranked.len() as u64;
-        ranked.sort_by(|a, b| a.0.total_cmp(&b.0));
-        let mut best: Option<(Solution<P>, SolverOptions<P>)> = None;
-        let mut left = FOLLOWED;
-        for (_, start) in &ranked {
-            let held = held_at_drive(start);
-            let left = &mut left[usize::from(held)];
-            if *left == 0 {
-                continue;
-            }
-            *left -= 1;
-            let mut options = options;
-            if let (true, Some(t)) = (held, plan.threshold) {
-                options.fixed[t] = true;
-            }
-            let found = minimise(&problem, *start, &options);
-            evaluations += found.evaluations;
-            if best.as_ref().is_none_or(|(b, _)| found.cost() < b.cost()) {
-                best = Some((found, options));
-            }
-        }
-        let Some((mut best, mut options)) = best else {
-            return self.nothing(plan, evaluations);
-        };
-        // A minimum in a kink of the cost: the search ran up against the drive and cannot go on; at the drive itself it
-        // is regular.
-        if let (Some(t), true) = (plan.threshold, plan.kinked) {
-            let from = best.parameters[t];
-            let near = l
-                .drives
-                .iter()
-                .copied()
-                .min_by(|a, b| (a - from).abs().total_cmp(&(b - from).abs()));
-            if let Some(drive) = near.filter(|d| !options.fixed[t] && *d >= plan.lower[t]) {
-                let mut held = options;
-                held.fixed[t] = true;
-                let mut start = best.parameters;
-                start[t] = drive;
-                let found = minimise(&problem, start, &held);
-                evaluations += found.evaluations;
-                if found.converged && found.cost() <= best.cost() * (1.0 + 1e-12) {
-                    (best, options) = (found, held);
-                }
-            }
-        }
-        self.finish(plan, &best, &options, evaluations)
-    }
-
-    /// A start with its best scale, and its cost.
-    fn scaled<const P: usize>(&self, plan: &Plan<P>, mut start: [f64; P]) -> Option<(f64, [f64; P])> {
-        let l = self.levels;
-        let (mut cross, mut square, mut total) = (0.0, 0.0, 0.0);
-        for ((drive, rate), root) in l.drives.iter().zip(&l.rates).zip(&l.root_weights) {
-            let (f, y) = (root * (plan.at)(*drive, &start).0, root * rate);
-            cross += f * y;
-            square += f * f;
-            total += y * y;
-        }
-        let scale = if plan.scaled { cross / square } else { 1.0 };
-        if !(scale > 0.0 && scale.is_finite()) {
-            return None;
-        }
-        if plan.scaled {
-            start[0] += scale.ln();
-        }
-        let cost = total - 2.0 * scale * cross + scale * scale * square;
-        cost.is_finite().then_some((cost, start))
-    }
-
-    fn nothing<const P: usize>(&self, plan: &Plan<P>, evaluations: u64) -> RivalFit {
-        RivalFit {
-            curve: plan.curve,
-            values: Vec::new(),
-            at_bound: Vec::new(),
-            level_rates: Vec::new(),
-            leverage: Vec::new(),
-            cost: f64::INFINITY,
-            left_out: None,
-            converged: false,
-            evaluations,
-            chart: (plan.chart)([0.0; P]),
-        }
-    }
-
-    fn finish<const P: usize>(
-        &self,
-        plan: &Plan<P>,
-        best: &Solution<P>,
-        options: &SolverOptions<P>,
-        mut evaluations: u64,
-    ) -> RivalFit {
-        let l = self.levels;
-        let mut held = *best;
-        for (bound, fixed) in held.at_bound.iter_mut().zip(options.fixed) {
-            *bound |= fixed;
-        }
-        let covariance = covariance(&held);
-        let (mut level_rates, mut leverage) = (Vec::new(), Vec::new());
-        for (drive, root) in l.drives.iter().zip(&l.root_weights) {
-            let (rate, slopes) = (plan.at)(*drive, &best.parameters);
-            level_rates.push(rate);
-            if let Some(c) = &covariance {
-                let mut sum = 0.0;
-                for i in 0..P {
-                    for j in 0..P {
-                        sum += slopes[i] * c[i][j] * slopes[j];
+    /// The best minimum and whether it came to rest; `None` without any start.
+    fn run<R: Rival<P>>(&mut self) -> Option<(Solution<P>, bool)> {
+        let options = self.options;
+        let mut followed: Vec<Solution<P>> = Vec::new();
+        self.follow::<R>(&mut followed);
+        let mut best = *followed.first()?;
+        if !self.estimated {
+            for i in 0..followed.len() {
+                if followed[i].cost() < best.cost() * PROMISING {
+                    let found = self.descend::<R>(followed[i].parameters, &options);
+                    if found.cost() < best.cost() || (i == 0 && found.cost() <= best.cost()) {
+                        best = found;
                     }
                 }
-                leverage.push((sum * root * root).clamp(0.0, 1.0));
+            }
+            return Some((best, best.converged));
+        }
+        // Settled minima with the likelihood of their residuals, each at its own weights.
+        let mut settled: Vec<(f64, Solution<P>, f64, bool)> = Vec::new();
+        let mut converged = false;
+        for _ in 0..SWITCHES {
+            converged = self.settle::<R>(&mut best);
+            if settled.iter().any(|(_, s, _, _)| same(s, &best)) {
+                // Two minima, each the better one at the other's weights: the likelier of them stays.
+                let (_, solution, variance, rested) = settled
+                    .iter()
+                    .max_by(|a, b| a.0.total_cmp(&b.0))
+                    .map(|(l, s, v, r)| (*l, *s, *v, *r))?;
+                self.variance = variance;
+                self.levels.reweigh(self.points, variance);
+                return Some((solution, rested));
+            }
+            let spread: f64 = self
+                .points
+                .iter()
+                .map(|p| (p.se * p.se + self.variance).ln())
+                .sum();
+            settled.push((-0.5 * (best.cost() + spread), best, self.variance, converged));
+            // The settled weights may favour another minimum.
+            followed.retain(|f| !same(f, &best));
+            self.follow::<R>(&mut followed);
+            let mut improved = false;
+            for i in 0..followed.len() {
+                if same(&followed[i], &best) || !(followed[i].cost() < best.cost() * PROMISING) {
+                    continue;
+                }
+                let found = self.descend::<R>(followed[i].parameters, &options);
+                followed[i] = found;
+                if found.cost() < best.cost() * (1.0 - 1e-8) - 1e-14 {
+                    best = found;
+                    improved = true;
+                }
+            }
+            if !improved {
+                break;
             }
         }
-        let left_out = (self.leave_out && best.converged).then(|| {
-            leave_one_level_out(l, best, options, plan.at, |levels, start, options| {
-                minimise(&Problem { levels, at: plan.at }, start, options)
+        Some((best, converged))
+    }
+
+    /// Roughly to a minimum from every start that leads to none of those `known`, at the present weights; all of them
+    /// in order of cost.
+    fn follow<R: Rival<P>>(&mut self, known: &mut Vec<Solution<P>>) {
+        let rough = SolverOptions {
+            decrease_tolerance: 3e-3,
+            max_iterations: 12,
+            ..self.options
+        };
+        for f in known.iter_mut() {
+            // Costs at the present weights.
+            let mut sums = NormalSums::default();
+            Cost::<R>::new(&self.levels).accumulate(&f.parameters, &mut sums);
+            sums.curvature = sums.symmetric();
+            f.sums = sums;
+            self.evaluations += 1;
+        }
+        for start in self.starts::<R>() {
+            let found = self.inside::<R>(start.parameters, &rough);
+            if !known.iter().any(|f| same(f, &found)) {
+                known.push(found);
+            }
+        }
+        known.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
+        known.truncate(2 * STARTS_FOLLOWED);
+    }
+
+    /// Down to the minimum within the gap of `start`.
+    fn inside<R: Rival<P>>(&mut self, start: [f64; P], options: &SolverOptions<P>) -> Solution<P> {
+        let drives = &self.levels.drives;
+        let bounded = match R::THRESHOLD {
+            Some(index) => enter_gap(options, index, drives, gap_of(drives, start[index])),
+            None => *options,
+        };
+        let found = minimise(&Cost::<R>::new(&self.levels), start, &bounded);
+        self.evaluations += found.evaluations;
+        found
+    }
+
+    /// The best start of each gap, or of the whole, the best few of them in order.
+    fn starts<R: Rival<P>>(&self) -> Vec<Start<P>> {
+        let mut all: Vec<Start<P>> = Vec::new();
+        let levels = &self.levels;
+        let Some(index) = R::THRESHOLD else {
+            R::starts(levels, f64::NAN, &mut all);
+            all.sort_by(|a, b| a.cost.total_cmp(&b.cost));
+            all.truncate(STARTS_FOLLOWED);
+            return all;
+        };
+        let (lower, upper) = (self.options.lower[index], self.options.upper[index]);
+        let (mut silent, mut least) = (0.0, f64::INFINITY);
+        for gap in 0..levels.drives.len() {
+            if gap > 0 {
+                silent += (levels.root_weights[gap - 1] * levels.rates[gap - 1]).powi(2);
+            }
+            // Below the threshold the curve is zero: this much cost no start in this gap or above it can avoid.
+            if silent > 2.0 * least + HOPELESS {
+                break;
+            }
+            let mut here: Vec<Start<P>> = Vec::new();
+            let top = levels.drives[gap];
+            if gap == 0 {
+                for below in [3.0, 1.0, 0.3, 0.1, 0.02] {
+                    let threshold = (top - below).max(lower);
+                    if threshold < top {
+                        R::starts(levels, threshold, &mut here);
+                    }
+                }
+            } else {
+                let bottom = levels.drives[gap - 1].max(lower);
+                for part in R::PARTS {
+                    let threshold = bottom + part * (top - bottom);
+                    if top > bottom && threshold <= upper {
+                        R::starts(levels, threshold, &mut here);
+                    }
+                }
+            }
+            if let Some(best) = here.into_iter().min_by(|a, b| a.cost.total_cmp(&b.cost)) {
+                least = least.min(best.cost);
+                all.push(best);
+            }
+        }
+        all.sort_by(|a, b| a.cost.total_cmp(&b.cost));
+        all.truncate(STARTS_FOLLOWED);
+        all
+    }
+
+    /// Alternates between the curve at given weights and the extra variance at a given curve until both stand still.
+    fn settle<R: Rival<P>>(&mut self, best: &mut Solution<P>) -> bool {
+        let errors: Vec<f64> = self.points.iter().map(|p| p.se).collect();
+        let interval_variance = errors.iter().map(|e| e * e).sum::<f64>() / errors.len() as f64;
+        let degrees = (self.points.len() - P) as f64;
+        let mut last_change = f64::INFINITY;
+        for round in 0..ROUNDS {
+            let limited = SolverOptions {
+                initial_damping: if round == 0 { 1e-4 } else { 1e-7 },
+                max_iterations: if round < 3 { 3 } else { self.options.max_iterations },
+                ..self.options
+            };
+            *best = self.inside::<R>(best.parameters, &limited);
+            self.set_residuals::<R>(&best.parameters);
+            let target = extra_variance(&self.residuals, &errors, degrees);
+            let change = target - self.variance;
+            // The sum of the changes to come, which shrink by a steady factor (Aitken); it also brings to rest a
+            // minimum that hops to and fro with the weights.
+            let ratio = if round > 1 {
+                (change / last_change).clamp(-0.9, 0.6)
+            } else {
+                0.0
+            };
+            last_change = change;
+            let step = if ratio.is_finite() {
+                change / (1.0 - ratio)
+            } else {
+                change
+            };
+            self.variance = (self.variance + step).max(0.0);
+            self.levels.reweigh(self.points, self.variance);
+            if change.abs() <= SETTLED * (target + interval_variance) {
+                let exact = SolverOptions {
+                    initial_damping: 1e-7,
+                    ..self.options
+                };
+                let here = R::THRESHOLD.map(|index| best.parameters[index]);
+                *best = self.descend::<R>(best.parameters, &exact);
+                let moved = R::THRESHOLD.zip(here).is_some_and(|(index, here)| {
+                    gap_of(&self.levels.drives, here) != gap_of(&self.levels.drives, best.parameters[index])
+                });
+                // In another gap the extra variance is another.
+                if !moved {
+                    return best.converged;
+                }
+                last_change = f64::INFINITY;
+            }
+        }
+        false
+    }
+
+    fn set_residuals<R: Rival<P>>(&mut self, parameters: &[f64; P]) {
+        let curve = R::new(parameters);
+        self.evaluations += 1;
+        self.fitted.clear();
+        self.fitted
+            .extend(self.levels.drives.iter().map(|d| curve.at(*d).rate));
+        self.residuals.clear();
+        self.residuals.extend(
+            self.points
+                .iter()
+                .zip(self.levels.level_of_point())
+                .map(|(p, l)| p.rate - self.fitted[l]),
+        );
+    }
+
+    fn report<R: Rival<P>>(&self, solution: &Solution<P>, units: Units) -> RivalFit {
+        let levels = &self.levels;
+        let p = solution.parameters;
+        let curve = R::new(&p);
+        let covariance = covariance(solution);
+        let at_level: Vec<(f64, f64)> = levels
+            .drives
+            .iter()
+            .zip(&levels.root_weights)
+            .map(|(drive, root)| {
+                let at = curve.at(*drive);
+                let variance = covariance.map_or(0.0, |c| spread(&c, &at.derivatives));
+                (at.rate * units.rate, variance * root * root)
             })
-        });
-        evaluations += left_out.as_ref().map_or(0, |left| left.evaluations);
-        let natural = (plan.natural)(&best.parameters);
+            .collect();
+        let (fitted, leverage): (Vec<f64>, Vec<f64>) = levels.level_of_point().map(|l| at_level[l]).unzip();
+        let on_limit = |i: usize| p[i] <= self.options.lower[i] || p[i] >= self.options.upper[i];
+        let names = R::CURVE.parameter_names();
+        let pad = |i: usize| if i < P { p[i] } else { 0.0 };
         RivalFit {
-            curve: plan.curve,
-            values: plan.names.into_iter().zip(natural).collect(),
+            curve: R::CURVE,
+            values: R::natural(&p, units).to_vec(),
             at_bound: (0..P)
-                .filter(|i| best.at_bound[*i] && Some(*i) != plan.threshold)
-                .map(|i| plan.names[i])
+                .filter(|i| on_limit(*i))
+                .map(|i| names[R::NAMED[i]])
                 .collect(),
-            level_rates,
-            leverage,
-            cost: best.cost(),
-            left_out,
-            converged: best.converged,
-            evaluations,
-            chart: (plan.chart)(best.parameters),
+            fitted,
+            leverage: if covariance.is_some() {
+                leverage
+            } else {
+                Vec::new()
+            },
+            extra_variance: self.variance * units.rate * units.rate,
+            cost: solution.cost(),
+            converged: true,
+            evaluations: self.evaluations,
+            chart: std::array::from_fn(pad),
+            units,
+            held: std::array::from_fn(|i| i < P && solution.at_bound[i]),
+            main: None,
         }
     }
+}
+
+/// Whether two ends of a search are the same minimum, to what a rough search can tell.
+fn same<const P: usize>(a: &Solution<P>, b: &Solution<P>) -> bool {
+    let mut distance = 0.0;
+    for i in 0..P {
+        for j in 0..P {
+            let d = (a.parameters[i] - b.parameters[i]) * (a.parameters[j] - b.parameters[j]);
+            distance += d * b.sums.curvature[i][j];
+        }
+    }
+    // A threshold on a drive carries no curvature of that drive's point: the positions must agree too.
+    distance <= 1e-3 && (0..P).all(|i| (a.parameters[i] - b.parameters[i]).abs() <= 1e-2)
+}
+
+/// d' C d, never below zero.
+pub(super) fn spread<const P: usize>(covariance: &[[f64; P]; P], derivatives: &[f64; P]) -> f64 {
+    let mut sum = 0.0;
+    for i in 0..P {
+        for j in 0..P {
+            sum += derivatives[i] * covariance[i][j] * derivatives[j];
+        }
+    }
+    sum.max(0.0)
 }

@@ -69,7 +69,7 @@ pub fn starts(levels: &Levels) -> Vec<[f64; 4]> {
 }
 
 /// Candidate thresholds: where the level means first cross fractions of the peak, or below all drives.
-fn thresholds(levels: &Levels, peak: f64, range: f64) -> Vec<f64> {
+pub(super) fn thresholds(levels: &Levels, peak: f64, range: f64) -> Vec<f64> {
     let crossing = |fraction: f64| -> f64 {
         let target = fraction * peak;
         let at = levels.rates.iter().position(|rate| *rate >= target).unwrap_or(0);

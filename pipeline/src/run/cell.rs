@@ -4,14 +4,15 @@ use crate::assess::flags::{Evidence, raise};
 use crate::assess::goodness::{FittedCurve, goodness, not_fitted, set_weights};
 use crate::assess::repeats::repeats;
 use crate::assess::verdict::{decline, peak_rate};
-use crate::assess::{Ceiling, CellResult, CurvePoint, ResponseResult, RivalCurve, Severity, Status};
+use crate::assess::{
+    Ceiling, CellResult, CurvePoint, Goodness, ResponseResult, RivalCurve, Severity, Status,
+};
 use crate::curve::Curve;
-use crate::fit::leave_one_out::{LeftOut, leave_one_level_out};
 use crate::fit::main_fit::{self, MainFit, Scatter};
-use crate::fit::objective::{Chart, Levels, Objective, evaluate};
-use crate::fit::solver::{Solution, SolverOptions, minimise};
+use crate::fit::objective::{Chart, evaluate};
 use crate::fit::{
-    BootstrapSettings, Estimates, Point, RivalFit, bootstrap, estimates, fit_rival, robust, t_quantile,
+    BootstrapSettings, Estimates, Point, RivalFit, bootstrap, estimates, fit_rival, leave_one_level_out,
+    robust, t_quantile,
 };
 use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_rates};
 use crate::recording::CellRecording;
@@ -249,7 +250,8 @@ impl Case<'_> {
         let (settings, fit) = (self.settings, &fitted.fit);
         let drives: Vec<f64> = points.iter().map(|p| p.drive).collect();
         if !fit.converged {
-            result.goodness = vec![measure_main(fitted, Curve::SmoothedHyperbola, false).0];
+            let main = RivalFit::of_main(&fitted.points, fit);
+            result.goodness = vec![measure(fitted, &main, false)];
             result.status = Status::NotConverged;
             result.reason = "the search for the best curve did not settle".into();
             return;
@@ -302,33 +304,28 @@ impl Case<'_> {
             if !asked && curve != Curve::SmoothedHyperbola {
                 continue;
             }
-            let drawn = match curve {
-                Curve::SmoothedHyperbola | Curve::SmoothedRamp => {
-                    let (measured, solution) = measure_main(fitted, curve, settings.leave_one_out);
-                    result.goodness.push(measured);
-                    let mut rates_hz = vec![0.0; grid.len()];
-                    evaluate(Chart::Ceiling, &solution, &grid, |i, rate, _| rates_hz[i] = rate);
-                    rates_hz
-                }
-                _ => match fit_rival(curve, &fitted.fit.levels, settings.leave_one_out) {
-                    Ok(rival) => {
-                        result.goodness.push(measure_rival(fitted, &rival));
-                        if !rival.converged {
-                            continue;
-                        }
-                        grid.iter().map(|drive| rival.rate_at(*drive)).collect()
-                    }
-                    Err(why) => {
-                        let steps = fitted.points.len();
-                        result.goodness.push(not_fitted(curve, steps, &why.to_string()));
-                        continue;
-                    }
-                },
+            let rival = match curve {
+                Curve::SmoothedHyperbola => Ok(RivalFit::of_main(&fitted.points, &fitted.fit)),
+                // The same weights as the main fit's.
+                _ => fit_rival(curve, &fitted.points, Scatter::Held(fitted.fit.extra_variance)),
             };
+            let rival = match rival {
+                Ok(rival) => rival,
+                Err(why) => {
+                    let steps = fitted.points.len();
+                    let mut row = not_fitted(curve, steps, &why.to_string());
+                    row.evaluations = why.evaluations();
+                    result.goodness.push(row);
+                    continue;
+                }
+            };
+            result
+                .goodness
+                .push(measure(fitted, &rival, settings.leave_one_out));
             if settings.draw_rivals && curve != Curve::SmoothedHyperbola {
                 result.rivals.push(RivalCurve {
                     curve: curve.name(),
-                    rates_hz: drawn,
+                    rates_hz: grid.iter().map(|drive| rival.rate_at(*drive)).collect(),
                 });
             }
         }
@@ -429,96 +426,25 @@ impl Fitted {
     }
 }
 
-/// Goodness of the main fit or of its ramp, and the parameters in the chart `Ceiling`.
-fn measure_main(fitted: &Fitted, curve: Curve, leave_out: bool) -> (crate::assess::Goodness, [f64; 4]) {
-    let (fit, levels) = (&fitted.fit, &fitted.fit.levels);
-    let mut options = fit.options;
-    let mut solution = fit.solution;
-    let (mut evaluations, mut converged) = (fit.evaluations, fit.converged);
-    if curve == Curve::SmoothedRamp {
-        options.fixed[1] = true;
-        solution = fit.ramp;
-        solution.at_bound[1] = true;
-        (evaluations, converged) = (fit.ramp.evaluations, fit.converged && fit.ramp.converged);
-    }
-    let mut level_rates = vec![0.0; levels.drives.len()];
-    evaluate(
-        Chart::Ceiling,
-        &solution.parameters,
-        &levels.drives,
-        |i, rate, _| level_rates[i] = rate,
-    );
-    let left_out = (leave_out && converged).then(|| leave_out_of_main(levels, &solution, &options));
-    evaluations += left_out.as_ref().map_or(0, |left| left.evaluations);
-    let measured = measure(
-        fitted,
-        curve,
-        &level_rates,
-        left_out.and_then(|left| left.rates).as_deref(),
-        converged,
-        evaluations,
-    );
-    (measured, solution.parameters)
-}
-
-fn leave_out_of_main(levels: &Levels, solution: &Solution<4>, options: &SolverOptions<4>) -> LeftOut {
-    leave_one_level_out(
-        levels,
-        solution,
-        options,
-        |drive, parameters| {
-            let mut found = (f64::NAN, [0.0; 4]);
-            evaluate(Chart::Ceiling, parameters, &[drive], |_, rate, slopes| {
-                found = (rate, *slopes);
-            });
-            found
-        },
-        |levels, start, options| {
-            minimise(
-                &Objective {
-                    levels,
-                    chart: Chart::Ceiling,
-                    rough: false,
-                },
-                start,
-                options,
-            )
-        },
-    )
-}
-
-fn measure_rival(fitted: &Fitted, rival: &RivalFit) -> crate::assess::Goodness {
-    measure(
-        fitted,
-        rival.curve,
-        &rival.level_rates,
-        rival.left_out.as_ref().and_then(|left| left.rates.as_deref()),
-        rival.converged,
-        rival.evaluations,
-    )
-}
-
-fn measure(
-    fitted: &Fitted,
-    curve: Curve,
-    level_rates: &[f64],
-    left_out: Option<&[f64]>,
-    converged: bool,
-    evaluations: u64,
-) -> crate::assess::Goodness {
-    let levels = &fitted.fit.levels;
-    let spread_out = |values: &[f64]| -> Vec<f64> { levels.level_of_point().map(|l| values[l]).collect() };
-    if level_rates.len() != levels.drives.len() {
-        return not_fitted(curve, fitted.points.len(), "no start leads to a finite cost");
-    }
-    goodness(&FittedCurve {
-        curve: curve.name(),
-        parameters: curve.parameters(),
+/// Goodness of one rate function on the points of the fit.
+fn measure(fitted: &Fitted, curve: &RivalFit, leave_out: bool) -> Goodness {
+    let left_out = (leave_out && curve.converged).then(|| leave_one_level_out(curve, &fitted.points));
+    let (loo_rmse_hz, evaluations) = match &left_out {
+        Some(Ok(left)) => (Some(left.rmse_hz), left.evaluations),
+        _ => (None, 0),
+    };
+    let mut measured = goodness(&FittedCurve {
+        curve: curve.curve.name(),
+        parameters: curve.curve.parameters(),
         points: &fitted.points,
-        fitted: &spread_out(level_rates),
-        left_out: left_out.map(spread_out).as_deref(),
+        fitted: &curve.fitted,
         extra_variance: fitted.fit.extra_variance,
-        converged,
-        evaluations,
-    })
+        loo_rmse_hz,
+        converged: curve.converged,
+        evaluations: curve.evaluations + evaluations,
+    });
+    if let Some(Err(why)) = left_out {
+        measured.reason = format!("fitted; not predicted without each level: {why}");
+    }
+    measured
 }

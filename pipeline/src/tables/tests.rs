@@ -314,13 +314,13 @@ fn tables_and_columns_are_those_of_the_interface() {
              peak_rate_Hz max_rate_Hz max_rate_Hz_se max_rate_Hz_lo max_rate_Hz_hi half_rise half_rise_se \
              half_rise_lo half_rise_hi threshold threshold_se threshold_lo threshold_hi noise_sd noise_sd_se \
              noise_sd_lo noise_sd_hi initial_gain initial_gain_se initial_gain_lo initial_gain_hi v_threshold_mV \
-             v_threshold_mV_se v_threshold_mV_lo v_threshold_mV_hi reached extra_sd_Hz interval_cv ceiling usable \
-             flags covariance layer cell_status",
+             v_threshold_mV_se v_threshold_mV_lo v_threshold_mV_hi reached extra_sd_Hz between_sd_Hz misfit_sd_Hz \
+             drift_percent drift_p interval_cv ceiling usable flags covariance layer cell_status",
         ),
         (
             "goodness",
             "cell response curve parameters steps log_likelihood aicc aicc_weight bic rmse_Hz r2 reduced_chi2 \
-             lack_of_fit_f lack_of_fit_p runs_p loo_rmse_Hz converged evaluations",
+             lack_of_fit_f lack_of_fit_p runs_p loo_rmse_Hz converged reason evaluations",
         ),
         (
             "steps",
