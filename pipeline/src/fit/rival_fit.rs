@@ -358,7 +358,7 @@ pub(super) fn options<const P: usize, R: Rival<P>>(levels: &Levels) -> SolverOpt
         upper,
         decrease_tolerance: 1e-11,
         step_tolerance: 1e-12,
-        max_iterations: 400,
+        max_iterations: 200,
         ..SolverOptions::default()
     }
 }
@@ -386,9 +386,12 @@ impl<'a, R> Cost<'a, R> {
     }
 }
 
-impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
-    #[inline]
-    fn accumulate(&self, parameters: &[f64; P], sums: &mut NormalSums<P>) {
+impl<R> Cost<'_, R> {
+    #[inline(always)]
+    fn pass<const P: usize>(&self, parameters: &[f64; P], sums: &mut NormalSums<P>)
+    where
+        R: RateFunction<P>,
+    {
         let l = self.levels;
         sums.cost = l.within;
         let curve = R::new(parameters);
@@ -396,13 +399,25 @@ impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
             let at = curve.at(*drive);
             sums.add(w * (rate - at.rate), &at.derivatives.map(|d| w * d));
         }
-        // A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an
-        // all but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its
-        // gradient is touched, so the minimum stays where it is.
-        let floor = CURVATURE_FLOOR * l.root_weights.iter().map(|w| w * w).sum::<f64>();
+    }
+
+    /// A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an all
+    /// but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its gradient
+    /// is touched, so the minimum stays where it is.
+    #[inline(always)]
+    fn support<const P: usize>(&self, sums: &mut NormalSums<P>) {
+        let floor = CURVATURE_FLOOR * self.levels.root_weights.iter().map(|w| w * w).sum::<f64>();
         for i in 0..P {
             sums.curvature[i][i] += floor;
         }
+    }
+}
+
+impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
+    #[inline]
+    fn accumulate(&self, parameters: &[f64; P], sums: &mut NormalSums<P>) {
+        self.pass(parameters, sums);
+        self.support(sums);
     }
 }
 
@@ -414,14 +429,117 @@ fn gap_of(drives: &[f64], threshold: f64) -> usize {
     drives.partition_point(|d| *d <= threshold).min(drives.len() - 1)
 }
 
-/// Puts the bounds of the threshold to the ends of gap `gap`.
-fn enter_gap<const P: usize>(options: &SolverOptions<P>, index: usize, drives: &[f64], gap: usize) -> SolverOptions<P> {
-    let mut inside = *options;
-    if gap > 0 {
-        inside.lower[index] = options.lower[index].max(drives[gap - 1]);
+/// A threshold within one gap, searched as t = ln(drive above the gap - threshold): the slope of a curve that rises
+/// infinitely fast is finite in t, and the valley of a steep curve, whose gain and threshold keep the rate of one
+/// drive, is straight.
+#[derive(Clone, Copy)]
+struct Gap {
+    index: usize,
+    bottom: f64,
+    top: f64,
+    /// Limits of t.
+    t: [f64; 2],
+}
+
+/// Closest that a threshold comes to the drive above it, in gaps; on it, it belongs to the next gap.
+const CLOSEST: f64 = 1e-9;
+
+impl Gap {
+    /// Gap number `number` within `limits`; `None` where they leave nothing of it.
+    fn new(index: usize, limits: [f64; 2], drives: &[f64], number: usize) -> Option<Self> {
+        let bottom = if number > 0 { limits[0].max(drives[number - 1]) } else { limits[0] };
+        let top = limits[1].min(drives[number]);
+        (top > bottom).then(|| Self {
+            index,
+            bottom,
+            top,
+            t: [(CLOSEST * (top - bottom)).ln(), (top - bottom).ln()],
+        })
     }
-    inside.upper[index] = options.upper[index].min(drives[gap]);
-    inside
+
+    fn threshold(&self, t: f64) -> f64 {
+        if t >= self.t[1] {
+            self.bottom
+        } else {
+            (self.top - t.exp()).max(self.bottom)
+        }
+    }
+
+    /// t of a threshold; one on the drive above, where t has no value, starts a little below it.
+    fn t_of(&self, threshold: f64) -> f64 {
+        if threshold <= self.bottom {
+            return self.t[1];
+        }
+        let below = self.top - threshold;
+        if below > 0.0 {
+            below.ln().clamp(self.t[0], self.t[1])
+        } else {
+            self.t[1] - 7.0
+        }
+    }
+}
+
+/// A search allowed this many iterations that still has not converged crawls along a bent valley.
+const CRAWLING: u64 = 60;
+
+/// The cost with the threshold replaced by t.
+struct InGap<'a, 'b, R> {
+    cost: &'a Cost<'b, R>,
+    gap: Gap,
+}
+
+impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for InGap<'_, '_, R> {
+    #[inline]
+    fn accumulate(&self, parameters: &[f64; P], sums: &mut NormalSums<P>) {
+        let index = self.gap.index;
+        let mut natural = *parameters;
+        natural[index] = self.gap.threshold(parameters[index]);
+        self.cost.pass(&natural, sums);
+        let slope = -parameters[index].exp();
+        sums.gradient[index] *= slope;
+        for i in 0..P {
+            if i < index {
+                sums.curvature[index][i] *= slope;
+            } else if i == index {
+                sums.curvature[i][i] *= slope * slope;
+            } else {
+                sums.curvature[i][index] *= slope;
+            }
+        }
+        self.cost.support(sums);
+    }
+}
+
+/// Down to the minimum within one gap. The solution is in the chart of the curve.
+fn minimise_in_gap<const P: usize, R: Rival<P>>(
+    cost: &Cost<'_, R>,
+    gap: Gap,
+    start: [f64; P],
+    options: &SolverOptions<P>,
+    evaluations: &mut u64,
+) -> Solution<P> {
+    let index = gap.index;
+    let mut inside = *options;
+    if !R::INFINITE_SLOPE {
+        (inside.lower[index], inside.upper[index]) = (gap.bottom, gap.top);
+        let found = minimise(cost, start, &inside);
+        *evaluations += found.evaluations;
+        // A search that its options cut short has not failed.
+        if found.converged || options.max_iterations < CRAWLING {
+            return found;
+        }
+    }
+    (inside.lower[index], inside.upper[index]) = (gap.t[0], gap.t[1]);
+    let mut from = start;
+    from[index] = gap.t_of(start[index]);
+    let mut found = minimise(&InGap { cost, gap }, from, &inside);
+    found.parameters[index] = gap.threshold(found.parameters[index]);
+    // Sums by the threshold itself.
+    found.sums = NormalSums::default();
+    cost.accumulate(&found.parameters, &mut found.sums);
+    found.sums.curvature = found.sums.symmetric();
+    *evaluations += found.evaluations + 1;
+    found
 }
 
 /// From `start` down to a minimum: the threshold of a curve with a kink is kept between two drives, and where the
@@ -439,43 +557,39 @@ pub(super) fn descend<const P: usize, R: Rival<P>>(
         *evaluations += found.evaluations;
         return found;
     };
-    let mut gap = gap_of(drives, start[index]);
-    let inside = enter_gap(options, index, drives, gap);
-    let mut best = minimise(cost, start, &inside);
-    *evaluations += best.evaluations;
-    let mut bounds = inside;
-    // Each move lowers the cost or turns an unfinished search into a finished one; the gaps bound their number.
+    let limits = [options.lower[index], options.upper[index]];
+    let mut number = gap_of(drives, start[index]);
+    let Some(mut gap) = Gap::new(index, limits, drives, number) else {
+        let found = minimise(cost, start, options);
+        *evaluations += found.evaluations;
+        return found;
+    };
+    let mut best = minimise_in_gap(cost, gap, start, options, evaluations);
+    // Each move lowers the cost or finishes an unfinished search; the gaps bound their number.
     for _ in 0..drives.len() {
         let at = best.parameters[index];
-        let width = bounds.upper[index] - bounds.lower[index];
-        let close = |bound: f64| (at - bound).abs() <= 1e-9 * width;
-        let (next, from) = if close(bounds.upper[index]) && gap + 1 < drives.len() {
-            (gap + 1, bounds.upper[index])
-        } else if close(bounds.lower[index]) && gap > 0 && bounds.lower[index] > options.lower[index] {
-            (gap - 1, bounds.lower[index])
+        let on_top = gap.top - at <= 1e-6 * (gap.top - gap.bottom);
+        let (next, from) = if on_top && number + 1 < drives.len() {
+            (number + 1, gap.top)
+        } else if at <= gap.bottom && number > 0 {
+            (number - 1, gap.bottom)
         } else {
             break;
         };
-        let inside = enter_gap(options, index, drives, next);
+        let Some(next_gap) = Gap::new(index, limits, drives, next) else {
+            break;
+        };
         let mut start = best.parameters;
         start[index] = from;
-        let found = minimise(cost, start, &inside);
-        *evaluations += found.evaluations;
-        // From below, the side of a drive on which its point is silent says whether the kink is a minimum.
-        let settles = next > gap && found.converged && found.cost() <= best.cost() * (1.0 + 1e-12);
-        if !(found.cost() < best.cost() * (1.0 - 1e-12) || settles) {
+        let found = minimise_in_gap(cost, next_gap, start, options, evaluations);
+        let margin = 1e-12 * best.cost();
+        // Seen from above, the side on which the drive is silent, a kink is a minimum or is none.
+        let settles = next > number && found.converged && !best.converged && found.cost() <= best.cost() + margin;
+        if !(found.cost() < best.cost() - margin || settles) {
             break;
         }
-        let stays = found.parameters[index] == from;
-        best = found;
-        bounds = inside;
-        gap = next;
-        if stays && settles {
-            // A kink approached from below: done, it was left only because it lowers the cost no further below.
-            break;
-        }
+        (best, gap, number) = (found, next_gap, next);
     }
-    // A threshold on a drive is a kink, not a limit of the search; it is held, though, for the covariance.
     best
 }
 
@@ -586,11 +700,15 @@ impl<const P: usize> Search<'_, P> {
     /// Down to the minimum within the gap of `start`.
     fn inside<R: Rival<P>>(&mut self, start: [f64; P], options: &SolverOptions<P>) -> Solution<P> {
         let drives = &self.levels.drives;
-        let bounded = match R::THRESHOLD {
-            Some(index) => enter_gap(options, index, drives, gap_of(drives, start[index])),
-            None => *options,
-        };
-        let found = minimise(&Cost::<R>::new(&self.levels), start, &bounded);
+        let cost = Cost::<R>::new(&self.levels);
+        let gap = R::THRESHOLD.and_then(|index| {
+            let limits = [options.lower[index], options.upper[index]];
+            Gap::new(index, limits, drives, gap_of(drives, start[index]))
+        });
+        if let Some(gap) = gap {
+            return minimise_in_gap(&cost, gap, start, options, &mut self.evaluations);
+        }
+        let found = minimise(&cost, start, options);
         self.evaluations += found.evaluations;
         found
     }
@@ -720,7 +838,17 @@ impl<const P: usize> Search<'_, P> {
             })
             .collect();
         let (fitted, leverage): (Vec<f64>, Vec<f64>) = levels.level_of_point().map(|l| at_level[l]).unzip();
-        let on_limit = |i: usize| p[i] <= self.options.lower[i] || p[i] >= self.options.upper[i];
+        let close = |index: usize| {
+            // As close below a drive as the search goes: the points ask for a jump.
+            let limits = [self.options.lower[index], self.options.upper[index]];
+            Gap::new(index, limits, &levels.drives, gap_of(&levels.drives, p[index]))
+                .is_some_and(|gap| gap.top - p[index] <= 1.01 * CLOSEST * (gap.top - gap.bottom))
+        };
+        let on_limit = |i: usize| {
+            p[i] <= self.options.lower[i]
+                || p[i] >= self.options.upper[i]
+                || (R::THRESHOLD == Some(i) && R::INFINITE_SLOPE && close(i))
+        };
         let names = R::CURVE.parameter_names();
         let pad = |i: usize| if i < P { p[i] } else { 0.0 };
         RivalFit {

@@ -23,6 +23,9 @@ pub(super) struct Start<const P: usize> {
 pub(super) trait Starts<const P: usize> {
     /// Where in a gap between two drives a threshold is tried, as a part of the gap.
     const PARTS: &'static [f64];
+    /// Whether the slope at the threshold is infinite, so that the threshold is searched by the logarithm of its
+    /// distance from the drive above.
+    const INFINITE_SLOPE: bool;
     /// For each chart parameter the index of the natural one whose limit it is.
     const NAMED: [usize; P];
     /// Lower and upper limits of the chart's parameters for drives from `lowest` to `highest`.
@@ -98,6 +101,7 @@ const HALF_RISES: [f64; 4] = [0.08, 0.3, 1.0, 3.0];
 
 impl Starts<2> for Ramp {
     const PARTS: &'static [f64] = &[0.0, 0.5];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 2] = [0, 1];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 2], [f64; 2]) {
@@ -116,6 +120,7 @@ impl Starts<2> for Ramp {
 
 impl Starts<2> for SquareRoot {
     const PARTS: &'static [f64] = &[0.0, 0.4, 0.8, 0.97];
+    const INFINITE_SLOPE: bool = true;
     const NAMED: [usize; 2] = [0, 1];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 2], [f64; 2]) {
@@ -134,6 +139,7 @@ impl Starts<2> for SquareRoot {
 
 impl Starts<3> for GainCeiling {
     const PARTS: &'static [f64] = &[0.0, 0.5];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 3] = [1, 0, 2];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
@@ -173,6 +179,7 @@ const HILL_HALF_RISES: [f64; 4] = [0.12, 0.35, 0.8, 2.0];
 
 impl Starts<4> for Hill {
     const PARTS: &'static [f64] = &[0.5];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 4] = [0, 1, 2, 3];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 4], [f64; 4]) {
@@ -222,6 +229,7 @@ impl Starts<4> for Hill {
 
 impl Starts<3> for RefractoryIntegrator {
     const PARTS: &'static [f64] = &[0.0, 0.4, 0.8, 0.97];
+    const INFINITE_SLOPE: bool = true;
     const NAMED: [usize; 3] = [0, 1, 2];
 
     fn bounds(_lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
@@ -269,6 +277,7 @@ const SCALES: [f64; 4] = [0.02, 0.07, 0.18, 0.5];
 
 impl Starts<3> for Logistic {
     const PARTS: &'static [f64] = &[];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 3] = [0, 1, 2];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
@@ -301,6 +310,7 @@ const NOISES: [f64; 4] = [0.003, 0.02, 0.07, 0.2];
 
 impl Starts<3> for SmoothedRamp {
     const PARTS: &'static [f64] = &[];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 3] = [0, 1, 2];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
