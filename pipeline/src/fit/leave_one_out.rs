@@ -5,7 +5,7 @@
 
 use super::objective::{Chart, Levels, Objective, Point, evaluate};
 use super::rival_fit::{Cost, Rival, RivalFit, descend, options, scale_points};
-use super::solver::{NormalSums, SolverOptions, cholesky_solve, minimise};
+use super::solver::{LeastSquares, NormalSums, SolverOptions, cholesky_solve, minimise};
 use crate::curve::Curve;
 use crate::curve::hill::Hill;
 use crate::curve::hyperbola::GainCeiling;
@@ -17,7 +17,7 @@ use crate::curve::square_root::SquareRoot;
 
 /// A refit has converged once the rest of the decrease of its weighted sum of squares is below this fraction of it: a
 /// shift of the prediction far below its standard error.
-const DECREASE: f64 = 1e-8;
+const DECREASE: f64 = 1e-6;
 
 /// Why there is no prediction error.
 #[derive(Clone, Copy, Debug, PartialEq, thiserror::Error)]
@@ -106,6 +106,17 @@ fn rival<const P: usize, R: Rival<P>>(fit: &RivalFit, points: &[Point]) -> Resul
     })
 }
 
+/// The main objective with a least curvature for ln noise SD, which far below the spacing of the drives changes nothing
+/// and would leave the curvature singular; cost and gradient are untouched.
+struct Supported<'a>(Objective<'a>);
+
+impl LeastSquares<4> for Supported<'_> {
+    fn accumulate(&self, parameters: &[f64; 4], sums: &mut NormalSums<4>) {
+        self.0.accumulate(parameters, sums);
+        sums.curvature[3][3] += 1e-13 * sums.curvature[0][0];
+    }
+}
+
 fn main_curve(fit: &RivalFit, points: &[Point]) -> Result<LeftOut, NotPredicted> {
     let Some(main_options) = fit.main else {
         return Err(NotPredicted::NoFit);
@@ -122,11 +133,11 @@ fn main_curve(fit: &RivalFit, points: &[Point]) -> Result<LeftOut, NotPredicted>
         derivatives.push(*d);
     });
     each_level(points, &mut levels, &fit.chart, &fit.held, &rates, &derivatives, 1.0, |levels, k, start, evaluations| {
-        let problem = Objective {
+        let problem = Supported(Objective {
             levels,
             chart: Chart::Ceiling,
             rough: false,
-        };
+        });
         let found = minimise(&problem, start, &search);
         *evaluations += found.evaluations + 1;
         let mut rate = f64::NAN;
