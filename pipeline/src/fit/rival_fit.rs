@@ -651,6 +651,7 @@ impl<const P: usize> Search<'_, P> {
             settled.push((-0.5 * (best.cost() + spread), best, self.variance, converged));
             // The settled weights may favour another minimum.
             followed.retain(|f| !same(f, &best));
+            followed.push(best);
             self.follow::<R>(&mut followed);
             let mut improved = false;
             for i in 0..followed.len() {
@@ -687,7 +688,22 @@ impl<const P: usize> Search<'_, P> {
             f.sums = sums;
             self.evaluations += 1;
         }
+        let again = !known.is_empty();
+        if again && R::THRESHOLD.is_none() {
+            // Without a kink the weights do not make new minima.
+            known.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
+            return;
+        }
+        let drives = &self.levels.drives;
+        let met: Vec<usize> = match R::THRESHOLD {
+            Some(index) => known.iter().map(|f| gap_of(drives, f.parameters[index])).collect(),
+            None => Vec::new(),
+        };
         for start in self.starts::<R>() {
+            let in_known_gap = |index: usize| met.contains(&gap_of(&self.levels.drives, start.parameters[index]));
+            if again && R::THRESHOLD.is_some_and(in_known_gap) {
+                continue;
+            }
             let found = self.inside::<R>(start.parameters, &rough);
             if !known.iter().any(|f| same(f, &found)) {
                 known.push(found);
@@ -769,6 +785,7 @@ impl<const P: usize> Search<'_, P> {
         let mut last_change = f64::INFINITY;
         for round in 0..ROUNDS {
             let limited = SolverOptions {
+                decrease_tolerance: 1e-8,
                 initial_damping: if round == 0 { 1e-4 } else { 1e-7 },
                 max_iterations: if round < 3 { 3 } else { self.options.max_iterations },
                 ..self.options
