@@ -9,11 +9,11 @@ use crate::assess::flags::{Evidence, raise};
 use crate::assess::goodness::{FittedCurve, goodness, set_weights};
 use crate::assess::verdict::{decline, peak_rate};
 use crate::assess::{Ceiling, CellResult, CurvePoint, ResponseResult, Severity, Status};
-use crate::curve::{SMOOTHED_HYPERBOLA, SMOOTHED_RAMP};
+use crate::curve::{Curve, SMOOTHED_HYPERBOLA, SMOOTHED_RAMP};
 use crate::fit::main_fit::{self, MainFit, Scatter};
 use crate::fit::objective::{Chart, Levels, evaluate};
 use crate::fit::solver::Solution;
-use crate::fit::{Estimates, Point, estimates, t_quantile};
+use crate::fit::{Estimates, Point, RivalFit, estimates, fit_rival, leave_one_level_out, t_quantile};
 use crate::rates::{CellCv, Response, StepRate, cell_interval_cv, fit_se, step_rates};
 use crate::recording::{CellRecording, DriveKind, ReadError, ReadOptions, RecordingSet, read};
 use crate::settings::{Analysis, SettingsError};
@@ -477,6 +477,9 @@ impl Case<'_> {
                 &fit.levels,
                 &fit.solution,
                 fit.extra_variance,
+                leave_one_level_out(&RivalFit::of_main(points, fit), points)
+                    .ok()
+                    .map(|left_out| left_out.rmse_hz),
                 fit.converged,
                 fit.evaluations,
             ),
@@ -487,6 +490,10 @@ impl Case<'_> {
                 &ramp.levels,
                 &ramp.solution,
                 ramp.extra_variance,
+                fit_rival(Curve::SmoothedRamp, points, Scatter::Held(ramp.extra_variance))
+                    .ok()
+                    .and_then(|held| leave_one_level_out(&held, points).ok())
+                    .map(|left_out| left_out.rmse_hz),
                 ramp.converged,
                 ramp.evaluations,
             ),
@@ -600,25 +607,16 @@ fn measure(
     levels: &Levels,
     solution: &Solution<4>,
     extra_variance: f64,
+    loo_rmse_hz: Option<f64>,
     converged: bool,
     evaluations: u64,
 ) -> crate::assess::Goodness {
-    let mut held = *solution;
-    if parameters == 3 {
-        held.at_bound[1] = true;
-    }
-    let mut leverage = vec![0.0; levels.drives.len()];
     let mut fitted = vec![0.0; levels.drives.len()];
-    let covariance = main_fit::covariance(&held);
     evaluate(
         Chart::Ceiling,
         &solution.parameters,
         &levels.drives,
-        |i, rate, derivatives| {
-            fitted[i] = rate;
-            leverage[i] =
-                covariance.map_or(0.0, |c| spread(&c, derivatives)) * levels.root_weights[i].powi(2);
-        },
+        |i, rate, _| fitted[i] = rate,
     );
     let spread_out = |values: &[f64]| -> Vec<f64> { levels.level_of_point().map(|l| values[l]).collect() };
     goodness(&FittedCurve {
@@ -626,11 +624,7 @@ fn measure(
         parameters,
         points,
         fitted: &spread_out(&fitted),
-        leverage: &if covariance.is_some() {
-            spread_out(&leverage)
-        } else {
-            Vec::new()
-        },
+        loo_rmse_hz,
         extra_variance,
         converged,
         evaluations,
