@@ -90,11 +90,18 @@ fn logistic_and_hill_agree_with_scipy_on_small_sets() {
         let name = format!("{curve}, {}", case["data"]);
         let fit = fit_rival(curve, &unweighted(&case["points"]), Scatter::Held(0.0)).unwrap();
         let rss = number(&case["rss"]);
-        assert!(fit.cost <= rss * (1.0 + 1e-9), "{name}: {} against {rss}", fit.cost);
+        assert!(
+            fit.cost <= rss * (1.0 + 1e-9),
+            "{name}: {} against {rss}",
+            fit.cost
+        );
         assert!(digits(fit.cost, rss) >= 8.0, "{name}: {} against {rss}", fit.cost);
         for ((parameter, found), wanted) in fit.parameters().zip(numbers(&case["parameters"])) {
             println!("{name}: {parameter} {found} against {wanted}");
-            assert!(digits(found, wanted) >= 5.0, "{name}: {parameter} {found} against {wanted}");
+            assert!(
+                digits(found, wanted) >= 5.0,
+                "{name}: {parameter} {found} against {wanted}"
+            );
         }
         compared += 1;
     }
@@ -243,7 +250,10 @@ fn cells_choose_the_curve_that_made_them() {
                 }
             }
             let (best, least) = *aicc.iter().min_by(|a, b| a.1.total_cmp(&b.1)).unwrap();
-            let own = aicc.iter().find(|(c, _)| *c == made_of).map_or(f64::INFINITY, |(_, a)| *a);
+            let own = aicc
+                .iter()
+                .find(|(c, _)| *c == made_of)
+                .map_or(f64::INFINITY, |(_, a)| *a);
             chosen += u64::from(best == made_of);
             if own - least <= 2.0 {
                 near += 1;

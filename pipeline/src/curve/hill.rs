@@ -56,7 +56,10 @@ impl RateFunction<4> for Hill {
         let rate = 1.0 / (self.ceiling + e);
         // Derivative by `power`.
         let slope = rate * (e * rate);
-        Rate::bounded(rate, [-rate * rate, -slope * n, -slope * n / above, slope * power])
+        Rate::bounded(
+            rate,
+            [-rate * rate, -slope * n, -slope * n / above, slope * power],
+        )
     }
 
     fn natural(parameters: &[f64; 4], units: Units) -> [f64; 4] {
@@ -78,7 +81,11 @@ mod tests {
 
     #[test]
     fn derivatives_match_differences() {
-        for parameters in [[0.0, 0.4, 0.2, 0.5], [0.02, -0.3, 0.1, -0.4], [0.9, -1.0, -0.6, 1.2]] {
+        for parameters in [
+            [0.0, 0.4, 0.2, 0.5],
+            [0.02, -0.3, 0.1, -0.4],
+            [0.9, -1.0, -0.6, 1.2],
+        ] {
             derivatives_match::<4, Hill>(parameters, &[-0.9, 0.35, 0.6, 1.0, 4.0]);
         }
     }
@@ -87,7 +94,13 @@ mod tests {
     fn closed_form_and_limits() {
         let (max, half, threshold, n): (f64, f64, f64, f64) = (120.0, 150.0, 70.0, 2.5);
         let chart = [1.0 / max, half.ln() - max.ln() / n, threshold, n.ln()];
-        let natural = Hill::natural(&chart, Units { drive: 1.0, rate: 1.0 });
+        let natural = Hill::natural(
+            &chart,
+            Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+        );
         for (found, wanted) in natural.iter().zip([max, half, threshold, n]) {
             assert!((found / wanted - 1.0).abs() < 1e-13);
         }

@@ -126,7 +126,13 @@ mod tests {
             &[-1e300, 0.0, 1.0],
         ]);
         let chart = [(90.0_f64 / 150.0).ln(), 1.0 / 90.0, 40.0];
-        let natural = GainCeiling::natural(&chart, Units { drive: 1.0, rate: 1.0 });
+        let natural = GainCeiling::natural(
+            &chart,
+            Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+        );
         for (found, wanted) in natural.iter().zip([90.0, 150.0, 40.0]) {
             assert!((found / wanted - 1.0_f64).abs() < 1e-13);
         }

@@ -80,7 +80,13 @@ mod tests {
         let (max, midpoint, scale): (f64, f64, f64) = (80.0, 250.0, 60.0);
         let c = 1.0 / max;
         let chart = [c, midpoint + scale * c.ln(), scale.ln()];
-        let natural = Logistic::natural(&chart, Units { drive: 1.0, rate: 1.0 });
+        let natural = Logistic::natural(
+            &chart,
+            Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+        );
         for (found, wanted) in natural.iter().zip([max, midpoint, scale]) {
             assert!((found / wanted - 1.0).abs() < 1e-13);
         }
@@ -95,11 +101,24 @@ mod tests {
         // Without a ceiling: an exponential.
         let free = Logistic::new(&[0.0, 100.0, scale.ln()]);
         assert!((free.at(160.0).rate - std::f64::consts::E).abs() < 1e-12);
-        assert_eq!(Logistic::natural(&[0.0, 1.0, 0.0], Units { drive: 1.0, rate: 1.0 })[0], f64::INFINITY);
+        assert_eq!(
+            Logistic::natural(
+                &[0.0, 1.0, 0.0],
+                Units {
+                    drive: 1.0,
+                    rate: 1.0
+                }
+            )[0],
+            f64::INFINITY
+        );
     }
 
     #[test]
     fn finite_everywhere() {
-        always_finite::<3, Logistic>([&[0.0, 1e-9, 1.0, 10.0], &[-1e6, 0.0, 1.0, 1e300], &[-700.0, -7.0, 0.0, 700.0]]);
+        always_finite::<3, Logistic>([
+            &[0.0, 1e-9, 1.0, 10.0],
+            &[-1e6, 0.0, 1.0, 1e300],
+            &[-700.0, -7.0, 0.0, 700.0],
+        ]);
     }
 }

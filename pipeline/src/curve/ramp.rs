@@ -58,7 +58,13 @@ mod tests {
         let curve = Ramp::new(&[0.25_f64.ln(), 100.0]);
         assert!((curve.at(180.0).rate - 20.0).abs() < 1e-13);
         assert_eq!(curve.at(100.0), Rate::SILENT);
-        let natural = Ramp::natural(&[0.0, 0.5], Units { drive: 400.0, rate: 80.0 });
+        let natural = Ramp::natural(
+            &[0.0, 0.5],
+            Units {
+                drive: 400.0,
+                rate: 80.0,
+            },
+        );
         assert_eq!(natural, [0.2, 200.0]);
     }
 

@@ -106,7 +106,13 @@ mod tests {
     fn closed_form_and_limits() {
         let (refractory, tau, rheobase): (f64, f64, f64) = (0.004, 0.02, 200.0);
         let chart = [refractory, -(tau * rheobase).ln(), rheobase];
-        let natural = RefractoryIntegrator::natural(&chart, Units { drive: 1.0, rate: 1.0 });
+        let natural = RefractoryIntegrator::natural(
+            &chart,
+            Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
+        );
         for (found, wanted) in natural.iter().zip([refractory, tau, rheobase]) {
             assert!((found / wanted - 1.0).abs() < 1e-13);
         }
@@ -119,7 +125,10 @@ mod tests {
         assert_eq!(curve.at(-500.0), Rate::SILENT);
         assert!((curve.at(1e15).rate - 250.0).abs() < 1e-6);
         // Series and logarithm meet.
-        let (low, high) = (RefractoryIntegrator::leak(100.0, 0.9999999), RefractoryIntegrator::leak(100.0, 1.0000001));
+        let (low, high) = (
+            RefractoryIntegrator::leak(100.0, 0.9999999),
+            RefractoryIntegrator::leak(100.0, 1.0000001),
+        );
         assert!((low.0 / high.0 - 1.0).abs() < 1e-8 && (low.1 / high.1 - 1.0).abs() < 1e-7);
         // No rheobase: the hyperbola through zero.
         let free = RefractoryIntegrator::new(&[0.01, 0.5_f64.ln(), 0.0]);

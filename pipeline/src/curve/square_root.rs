@@ -59,7 +59,13 @@ mod tests {
         let curve = SquareRoot::new(&[3.0_f64.ln(), 100.0]);
         assert!((curve.at(181.0).rate - 27.0).abs() < 1e-13);
         assert_eq!(curve.at(100.0), Rate::SILENT);
-        let natural = SquareRoot::natural(&[0.0, 0.5], Units { drive: 400.0, rate: 80.0 });
+        let natural = SquareRoot::natural(
+            &[0.0, 0.5],
+            Units {
+                drive: 400.0,
+                rate: 80.0,
+            },
+        );
         assert_eq!(natural, [4.0, 200.0]);
     }
 

@@ -3,8 +3,9 @@
 //! The refits start from the full fit moved by the Gauss-Newton step that takes the level away, with the extra
 //! variance held at the full fit's, and are searched to their minimum; a threshold with a kink may move to other gaps.
 
+use super::gaps::{Cost, Rival, descend};
 use super::objective::{Chart, Levels, Objective, Point, evaluate};
-use super::rival_fit::{Cost, Rival, RivalFit, descend, options, scale_points};
+use super::rival_fit::{RivalFit, options, scale_points};
 use super::solver::{LeastSquares, NormalSums, SolverOptions, cholesky_solve, minimise};
 use crate::curve::Curve;
 use crate::curve::hill::Hill;
@@ -94,16 +95,25 @@ fn rival<const P: usize, R: Rival<P>>(fit: &RivalFit, points: &[Point]) -> Resul
     let rates: Vec<f64> = levels.drives.iter().map(|d| curve.at(*d).rate).collect();
     let mut others: Vec<f64> = Vec::with_capacity(levels.drives.len());
     let all = levels.drives.clone();
-    each_level(points, &mut levels, &full, &held, &rates, &derivatives, units.rate, |levels, k, start, evaluations| {
-        // The level left out makes no kink; the limits of the search stay those of the full fit.
-        others.clear();
-        others.extend(all.iter().enumerate().filter(|(i, _)| *i != k).map(|(_, d)| *d));
-        let drives: &[f64] = if k + 1 == all.len() { &all } else { &others };
-        let found = descend(&Cost::<R>::new(levels), drives, start, &search, evaluations);
-        found
-            .converged
-            .then(|| R::new(&found.parameters).at(levels.drives[k]).rate)
-    })
+    each_level(
+        points,
+        &mut levels,
+        &full,
+        &held,
+        &rates,
+        &derivatives,
+        units.rate,
+        |levels, k, start, evaluations| {
+            // The level left out makes no kink; the limits of the search stay those of the full fit.
+            others.clear();
+            others.extend(all.iter().enumerate().filter(|(i, _)| *i != k).map(|(_, d)| *d));
+            let drives: &[f64] = if k + 1 == all.len() { &all } else { &others };
+            let found = descend(&Cost::<R>::new(levels), drives, start, &search, evaluations);
+            found
+                .converged
+                .then(|| R::new(&found.parameters).at(levels.drives[k]).rate)
+        },
+    )
 }
 
 /// The main objective with a least curvature for ln noise SD, which far below the spacing of the drives changes nothing
@@ -132,18 +142,32 @@ fn main_curve(fit: &RivalFit, points: &[Point]) -> Result<LeftOut, NotPredicted>
         rates.push(f);
         derivatives.push(*d);
     });
-    each_level(points, &mut levels, &fit.chart, &fit.held, &rates, &derivatives, 1.0, |levels, k, start, evaluations| {
-        let problem = Supported(Objective {
-            levels,
-            chart: Chart::Ceiling,
-            rough: false,
-        });
-        let found = minimise(&problem, start, &search);
-        *evaluations += found.evaluations + 1;
-        let mut rate = f64::NAN;
-        evaluate(Chart::Ceiling, &found.parameters, &[levels.drives[k]], |_, f, _| rate = f);
-        found.converged.then_some(rate)
-    })
+    each_level(
+        points,
+        &mut levels,
+        &fit.chart,
+        &fit.held,
+        &rates,
+        &derivatives,
+        1.0,
+        |levels, k, start, evaluations| {
+            let problem = Supported(Objective {
+                levels,
+                chart: Chart::Ceiling,
+                rough: false,
+            });
+            let found = minimise(&problem, start, &search);
+            *evaluations += found.evaluations + 1;
+            let mut rate = f64::NAN;
+            evaluate(
+                Chart::Ceiling,
+                &found.parameters,
+                &[levels.drives[k]],
+                |_, f, _| rate = f,
+            );
+            found.converged.then_some(rate)
+        },
+    )
 }
 
 /// Takes each level's weight away in turn and asks `refit` for the rate there, in units of `unit` Hz.
@@ -171,7 +195,10 @@ fn each_level<const P: usize>(
         all.add(w * (levels.rates[i] - rates[i]), &derivatives[i].map(|d| w * d));
     }
     let (within, mut evaluations) = (levels.within, 1);
-    let drives: Vec<f64> = points.chunk_by(|a, b| a.drive == b.drive).map(|level| level[0].drive).collect();
+    let drives: Vec<f64> = points
+        .chunk_by(|a, b| a.drive == b.drive)
+        .map(|level| level[0].drive)
+        .collect();
     let mut predicted_level = vec![0.0; count];
     for k in 0..count {
         let weight = levels.root_weights[k];
@@ -181,7 +208,14 @@ fn each_level<const P: usize>(
         }
         levels.root_weights[k] = 0.0;
         levels.within = 0.0;
-        let start = without(&all, full, held, weight, levels.rates[k] - rates[k], &derivatives[k]);
+        let start = without(
+            &all,
+            full,
+            held,
+            weight,
+            levels.rates[k] - rates[k],
+            &derivatives[k],
+        );
         let found = refit(levels, k, start, &mut evaluations).or_else(|| {
             // The step may have led astray; the full fit itself is a start as well.
             refit(levels, k, *full, &mut evaluations)
@@ -194,7 +228,11 @@ fn each_level<const P: usize>(
     }
     levels.within = within;
     let predicted: Vec<f64> = levels.level_of_point().map(|l| predicted_level[l]).collect();
-    let squares: f64 = points.iter().zip(&predicted).map(|(p, f)| (p.rate - f).powi(2)).sum();
+    let squares: f64 = points
+        .iter()
+        .zip(&predicted)
+        .map(|(p, f)| (p.rate - f).powi(2))
+        .sum();
     Ok(LeftOut {
         rmse_hz: (squares / points.len() as f64).sqrt(),
         predicted,
@@ -236,5 +274,110 @@ fn without<const P: usize>(
             std::array::from_fn(|i| full[i] + step[i])
         }
         _ => *full,
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    #![allow(clippy::unwrap_used)]
+    use super::super::main_fit::Scatter;
+    use super::super::rival_fit::fit_rival;
+    use super::*;
+
+    fn points() -> Vec<Point> {
+        (0..22)
+            .map(|i| {
+                let drive = f64::from(i / 2) * 40.0;
+                let clean = if drive > 90.0 {
+                    120.0 * (drive - 90.0) / (drive + 60.0)
+                } else {
+                    0.0
+                };
+                let rate = clean
+                    + if clean > 0.0 {
+                        1.5 * f64::from(i * 7 % 5 - 2)
+                    } else {
+                        0.0
+                    };
+                Point {
+                    drive,
+                    rate,
+                    se: 0.4 + 0.1 * f64::from(i % 3),
+                }
+            })
+            .collect()
+    }
+
+    #[test]
+    fn agrees_with_fits_from_scratch() {
+        let points = points();
+        for curve in Curve::ALL {
+            let fit = fit_rival(curve, &points, Scatter::Estimated).unwrap();
+            let left_out = leave_one_level_out(&fit, &points).unwrap();
+            let mut squares = 0.0;
+            let mut compared = 0;
+            for level in points.chunk_by(|a, b| a.drive == b.drive) {
+                let others: Vec<Point> = points
+                    .iter()
+                    .filter(|p| p.drive != level[0].drive)
+                    .copied()
+                    .collect();
+                let refit = fit_rival(curve, &others, Scatter::Held(fit.extra_variance)).unwrap();
+                let predicted = refit.rate_at(level[0].drive);
+                squares += level.iter().map(|p| (p.rate - predicted).powi(2)).sum::<f64>();
+                let index = points.iter().position(|p| p.drive == level[0].drive).unwrap();
+                // An outer level may be predicted from another local minimum when everything is searched anew.
+                compared +=
+                    usize::from((left_out.predicted[index] - predicted).abs() < 0.02 * (1.0 + predicted));
+            }
+            let scratch = (squares / points.len() as f64).sqrt();
+            assert!(
+                compared >= 10,
+                "{curve}: {compared} of 11 levels; {} against {scratch}",
+                left_out.rmse_hz
+            );
+            let residual: f64 = points
+                .iter()
+                .zip(&fit.fitted)
+                .map(|(p, f)| (p.rate - f).powi(2))
+                .sum();
+            assert!(
+                left_out.rmse_hz > (residual / points.len() as f64).sqrt(),
+                "{curve}"
+            );
+            assert_eq!(left_out.predicted.len(), points.len());
+        }
+    }
+
+    #[test]
+    fn says_why_there_is_none() {
+        let all = points();
+        let two: Vec<Point> = all
+            .iter()
+            .filter(|p| p.drive == 160.0 || p.drive == 320.0)
+            .copied()
+            .collect();
+        let fit = fit_rival(Curve::Ramp, &two, Scatter::Held(1.0)).unwrap();
+        let reason = leave_one_level_out(&fit, &two).unwrap_err();
+        assert_eq!(
+            reason,
+            NotPredicted::TooFewLevels {
+                levels: 2,
+                parameters: 2
+            }
+        );
+        let lone: Vec<Point> = all
+            .iter()
+            .filter(|p| p.drive <= 120.0)
+            .map(|p| Point {
+                rate: if p.drive < 120.0 { 0.0 } else { 20.0 },
+                ..*p
+            })
+            .collect();
+        let fit = fit_rival(Curve::Ramp, &lone, Scatter::Held(1.0)).unwrap();
+        assert_eq!(
+            leave_one_level_out(&fit, &lone).unwrap_err(),
+            NotPredicted::NoRate { drive: 120.0 }
+        );
     }
 }

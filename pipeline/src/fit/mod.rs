@@ -2,6 +2,7 @@
 
 mod estimates;
 mod extra_sd;
+mod gaps;
 pub mod hyperbola_fit;
 pub mod leave_one_out;
 pub mod main_fit;

@@ -10,9 +10,10 @@
 //! followed, and a search that ends on a drive is continued on its other side.
 
 use super::extra_sd::extra_variance;
+use super::gaps::{Cost, Gap, Rival, descend, ends, gap_of, minimise_in_gap};
 use super::main_fit::{self, MainFit, Scatter, covariance};
 use super::objective::{Chart, Levels, Point, evaluate};
-use super::rival_starts::{Start, Starts};
+use super::rival_starts::Start;
 use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions, minimise};
 use crate::curve::hill::Hill;
 use crate::curve::hyperbola::GainCeiling;
@@ -71,7 +72,9 @@ pub enum Unfitted {
     #[error("no step has a rate above zero")]
     NoRate,
     /// The curve is defined for positive drives only, and too few are.
-    #[error("{curve} counts drive from rest and needs {needed} distinct drives above zero, of which there are {levels}")]
+    #[error(
+        "{curve} counts drive from rest and needs {needed} distinct drives above zero, of which there are {levels}"
+    )]
     TooFewPositiveDrives {
         /// The curve.
         curve: Curve,
@@ -81,7 +84,9 @@ pub enum Unfitted {
         needed: usize,
     },
     /// A number that is not finite, a standard error that is not positive, or scales that no arithmetic holds.
-    #[error("drive {drive}, rate {rate} Hz, standard error {se} Hz: not a point that a curve can be fitted to")]
+    #[error(
+        "drive {drive}, rate {rate} Hz, standard error {se} Hz: not a point that a curve can be fitted to"
+    )]
     BadPoint {
         /// Drive.
         drive: f64,
@@ -191,20 +196,28 @@ impl RivalFit {
         let names = Curve::SmoothedHyperbola.parameter_names();
         // The chart's (gain, ceiling) are max rate and half-rise: a gain at its limit is told as the half-rise's.
         let of_chart = [names[1], names[0], names[2], names[3]];
-        let (fitted, leverage): (Vec<f64>, Vec<f64>) = main.levels.level_of_point().map(|l| at_level[l]).unzip();
+        let (fitted, leverage): (Vec<f64>, Vec<f64>) =
+            main.levels.level_of_point().map(|l| at_level[l]).unzip();
         debug_assert_eq!(fitted.len(), points.len());
         Self {
             curve: Curve::SmoothedHyperbola,
             values: vec![1.0 / p[1], 1.0 / (p[0].exp() * p[1]), p[2], p[3].exp()],
             at_bound: (0..4).filter(|i| held[*i]).map(|i| of_chart[i]).collect(),
             fitted,
-            leverage: if covariance.is_some() { leverage } else { Vec::new() },
+            leverage: if covariance.is_some() {
+                leverage
+            } else {
+                Vec::new()
+            },
             extra_variance: main.extra_variance,
             cost: main.solution.cost(),
             converged: main.converged,
             evaluations: main.evaluations,
             chart: p,
-            units: Units { drive: 1.0, rate: 1.0 },
+            units: Units {
+                drive: 1.0,
+                rate: 1.0,
+            },
             held,
             main: Some(main.options),
         }
@@ -300,11 +313,6 @@ fn check(curve: Curve, points: &[Point]) -> Result<Units, Unfitted> {
     })
 }
 
-/// A rival as the search needs it.
-pub(super) trait Rival<const P: usize>: RateFunction<P> + Starts<P> {}
-
-impl<const P: usize, R: RateFunction<P> + Starts<P>> Rival<P> for R {}
-
 fn fit_as<const P: usize, R: Rival<P>>(points: &[Point], scatter: Scatter) -> Result<RivalFit, Unfitted> {
     let units = check(R::CURVE, points)?;
     let scaled = scale_points(points, units);
@@ -363,236 +371,6 @@ pub(super) fn options<const P: usize, R: Rival<P>>(levels: &Levels) -> SolverOpt
     }
 }
 
-/// Lowest and highest drive.
-pub(super) fn ends(levels: &Levels) -> (f64, f64) {
-    match (levels.drives.first(), levels.drives.last()) {
-        (Some(first), Some(last)) => (*first, *last),
-        _ => (0.0, 0.0),
-    }
-}
-
-/// The weighted sum of squares of one curve over levels.
-pub(super) struct Cost<'a, R> {
-    pub(super) levels: &'a Levels,
-    pub(super) curve: std::marker::PhantomData<R>,
-}
-
-impl<'a, R> Cost<'a, R> {
-    pub(super) fn new(levels: &'a Levels) -> Self {
-        Self {
-            levels,
-            curve: std::marker::PhantomData,
-        }
-    }
-}
-
-impl<R> Cost<'_, R> {
-    #[inline(always)]
-    fn pass<const P: usize>(&self, parameters: &[f64; P], sums: &mut NormalSums<P>)
-    where
-        R: RateFunction<P>,
-    {
-        let l = self.levels;
-        sums.cost = l.within;
-        let curve = R::new(parameters);
-        for ((drive, rate), w) in l.drives.iter().zip(&l.rates).zip(&l.root_weights) {
-            let at = curve.at(*drive);
-            sums.add(w * (rate - at.rate), &at.derivatives.map(|d| w * d));
-        }
-    }
-
-    /// A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an all
-    /// but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its gradient
-    /// is touched, so the minimum stays where it is.
-    #[inline(always)]
-    fn support<const P: usize>(&self, sums: &mut NormalSums<P>) {
-        let floor = CURVATURE_FLOOR * self.levels.root_weights.iter().map(|w| w * w).sum::<f64>();
-        for i in 0..P {
-            sums.curvature[i][i] += floor;
-        }
-    }
-}
-
-impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
-    #[inline]
-    fn accumulate(&self, parameters: &[f64; P], sums: &mut NormalSums<P>) {
-        self.pass(parameters, sums);
-        self.support(sums);
-    }
-}
-
-/// Least curvature of a parameter, as a fraction of what it has where one unit of it changes every rate by the peak.
-const CURVATURE_FLOOR: f64 = 1e-13;
-
-/// The gap (index of the drive above it) in which a threshold lies; one that is on a drive belongs to the gap above.
-fn gap_of(drives: &[f64], threshold: f64) -> usize {
-    drives.partition_point(|d| *d <= threshold).min(drives.len() - 1)
-}
-
-/// A threshold within one gap, searched as t = ln(drive above the gap - threshold): the slope of a curve that rises
-/// infinitely fast is finite in t, and the valley of a steep curve, whose gain and threshold keep the rate of one
-/// drive, is straight.
-#[derive(Clone, Copy)]
-struct Gap {
-    index: usize,
-    bottom: f64,
-    top: f64,
-    /// Limits of t.
-    t: [f64; 2],
-}
-
-/// Closest that a threshold comes to the drive above it, in gaps; on it, it belongs to the next gap.
-const CLOSEST: f64 = 1e-9;
-
-impl Gap {
-    /// Gap number `number` within `limits`; `None` where they leave nothing of it.
-    fn new(index: usize, limits: [f64; 2], drives: &[f64], number: usize) -> Option<Self> {
-        let bottom = if number > 0 { limits[0].max(drives[number - 1]) } else { limits[0] };
-        let top = limits[1].min(drives[number]);
-        (top > bottom).then(|| Self {
-            index,
-            bottom,
-            top,
-            t: [(CLOSEST * (top - bottom)).ln(), (top - bottom).ln()],
-        })
-    }
-
-    fn threshold(&self, t: f64) -> f64 {
-        if t >= self.t[1] {
-            self.bottom
-        } else {
-            (self.top - t.exp()).max(self.bottom)
-        }
-    }
-
-    /// t of a threshold; one on the drive above, where t has no value, starts a little below it.
-    fn t_of(&self, threshold: f64) -> f64 {
-        if threshold <= self.bottom {
-            return self.t[1];
-        }
-        let below = self.top - threshold;
-        if below > 0.0 {
-            below.ln().clamp(self.t[0], self.t[1])
-        } else {
-            self.t[1] - 7.0
-        }
-    }
-}
-
-/// A search allowed this many iterations that still has not converged crawls along a bent valley.
-const CRAWLING: u64 = 60;
-
-/// The cost with the threshold replaced by t.
-struct InGap<'a, 'b, R> {
-    cost: &'a Cost<'b, R>,
-    gap: Gap,
-}
-
-impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for InGap<'_, '_, R> {
-    #[inline]
-    fn accumulate(&self, parameters: &[f64; P], sums: &mut NormalSums<P>) {
-        let index = self.gap.index;
-        let mut natural = *parameters;
-        natural[index] = self.gap.threshold(parameters[index]);
-        self.cost.pass(&natural, sums);
-        let slope = -parameters[index].exp();
-        sums.gradient[index] *= slope;
-        for i in 0..P {
-            if i < index {
-                sums.curvature[index][i] *= slope;
-            } else if i == index {
-                sums.curvature[i][i] *= slope * slope;
-            } else {
-                sums.curvature[i][index] *= slope;
-            }
-        }
-        self.cost.support(sums);
-    }
-}
-
-/// Down to the minimum within one gap. The solution is in the chart of the curve.
-fn minimise_in_gap<const P: usize, R: Rival<P>>(
-    cost: &Cost<'_, R>,
-    gap: Gap,
-    start: [f64; P],
-    options: &SolverOptions<P>,
-    evaluations: &mut u64,
-) -> Solution<P> {
-    let index = gap.index;
-    let mut inside = *options;
-    if !R::INFINITE_SLOPE {
-        (inside.lower[index], inside.upper[index]) = (gap.bottom, gap.top);
-        let found = minimise(cost, start, &inside);
-        *evaluations += found.evaluations;
-        // A search that its options cut short has not failed.
-        if found.converged || options.max_iterations < CRAWLING {
-            return found;
-        }
-    }
-    (inside.lower[index], inside.upper[index]) = (gap.t[0], gap.t[1]);
-    let mut from = start;
-    from[index] = gap.t_of(start[index]);
-    let mut found = minimise(&InGap { cost, gap }, from, &inside);
-    found.parameters[index] = gap.threshold(found.parameters[index]);
-    // Sums by the threshold itself.
-    found.sums = NormalSums::default();
-    cost.accumulate(&found.parameters, &mut found.sums);
-    found.sums.curvature = found.sums.symmetric();
-    *evaluations += found.evaluations + 1;
-    found
-}
-
-/// From `start` down to a minimum: the threshold of a curve with a kink is kept between two drives, and where the
-/// search ends on one of them it goes on in the next gap for as long as that lowers the cost. `drives` are those that
-/// have weight.
-pub(super) fn descend<const P: usize, R: Rival<P>>(
-    cost: &Cost<'_, R>,
-    drives: &[f64],
-    start: [f64; P],
-    options: &SolverOptions<P>,
-    evaluations: &mut u64,
-) -> Solution<P> {
-    let Some(index) = R::THRESHOLD else {
-        let found = minimise(cost, start, options);
-        *evaluations += found.evaluations;
-        return found;
-    };
-    let limits = [options.lower[index], options.upper[index]];
-    let mut number = gap_of(drives, start[index]);
-    let Some(mut gap) = Gap::new(index, limits, drives, number) else {
-        let found = minimise(cost, start, options);
-        *evaluations += found.evaluations;
-        return found;
-    };
-    let mut best = minimise_in_gap(cost, gap, start, options, evaluations);
-    // Each move lowers the cost or finishes an unfinished search; the gaps bound their number.
-    for _ in 0..drives.len() {
-        let at = best.parameters[index];
-        let on_top = gap.top - at <= 1e-6 * (gap.top - gap.bottom);
-        let (next, from) = if on_top && number + 1 < drives.len() {
-            (number + 1, gap.top)
-        } else if at <= gap.bottom && number > 0 {
-            (number - 1, gap.bottom)
-        } else {
-            break;
-        };
-        let Some(next_gap) = Gap::new(index, limits, drives, next) else {
-            break;
-        };
-        let mut start = best.parameters;
-        start[index] = from;
-        let found = minimise_in_gap(cost, next_gap, start, options, evaluations);
-        let margin = 1e-12 * best.cost();
-        // Seen from above, the side on which the drive is silent, a kink is a minimum or is none.
-        let settles = next > number && found.converged && !best.converged && found.cost() <= best.cost() + margin;
-        if !(found.cost() < best.cost() - margin || settles) {
-            break;
-        }
-        (best, gap, number) = (found, next_gap, next);
-    }
-    best
-}
-
 struct Search<'a, const P: usize> {
     estimated: bool,
     points: &'a [Point],
@@ -647,7 +425,11 @@ impl<const P: usize> Search<'_, P> {
                 self.levels.reweigh(self.points, variance);
                 return Some((solution, rested));
             }
-            let spread: f64 = self.points.iter().map(|p| (p.se * p.se + self.variance).ln()).sum();
+            let spread: f64 = self
+                .points
+                .iter()
+                .map(|p| (p.se * p.se + self.variance).ln())
+                .sum();
             settled.push((-0.5 * (best.cost() + spread), best, self.variance, converged));
             // The settled weights may favour another minimum.
             followed.retain(|f| !same(f, &best));
@@ -696,11 +478,15 @@ impl<const P: usize> Search<'_, P> {
         }
         let drives = &self.levels.drives;
         let met: Vec<usize> = match R::THRESHOLD {
-            Some(index) => known.iter().map(|f| gap_of(drives, f.parameters[index])).collect(),
+            Some(index) => known
+                .iter()
+                .map(|f| gap_of(drives, f.parameters[index]))
+                .collect(),
             None => Vec::new(),
         };
         for start in self.starts::<R>() {
-            let in_known_gap = |index: usize| met.contains(&gap_of(&self.levels.drives, start.parameters[index]));
+            let in_known_gap =
+                |index: usize| met.contains(&gap_of(&self.levels.drives, start.parameters[index]));
             if again && R::THRESHOLD.is_some_and(in_known_gap) {
                 continue;
             }
@@ -802,7 +588,11 @@ impl<const P: usize> Search<'_, P> {
                 0.0
             };
             last_change = change;
-            let step = if ratio.is_finite() { change / (1.0 - ratio) } else { change };
+            let step = if ratio.is_finite() {
+                change / (1.0 - ratio)
+            } else {
+                change
+            };
             self.variance = (self.variance + step).max(0.0);
             self.levels.reweigh(self.points, self.variance);
             if change.abs() <= SETTLED * (target + interval_variance) {
@@ -829,7 +619,8 @@ impl<const P: usize> Search<'_, P> {
         let curve = R::new(parameters);
         self.evaluations += 1;
         self.fitted.clear();
-        self.fitted.extend(self.levels.drives.iter().map(|d| curve.at(*d).rate));
+        self.fitted
+            .extend(self.levels.drives.iter().map(|d| curve.at(*d).rate));
         self.residuals.clear();
         self.residuals.extend(
             self.points
@@ -859,7 +650,7 @@ impl<const P: usize> Search<'_, P> {
             // As close below a drive as the search goes: the points ask for a jump.
             let limits = [self.options.lower[index], self.options.upper[index]];
             Gap::new(index, limits, &levels.drives, gap_of(&levels.drives, p[index]))
-                .is_some_and(|gap| gap.top - p[index] <= 1.01 * CLOSEST * (gap.top - gap.bottom))
+                .is_some_and(|gap| gap.is_closest(p[index]))
         };
         let on_limit = |i: usize| {
             p[i] <= self.options.lower[i]
@@ -871,9 +662,16 @@ impl<const P: usize> Search<'_, P> {
         RivalFit {
             curve: R::CURVE,
             values: R::natural(&p, units).to_vec(),
-            at_bound: (0..P).filter(|i| on_limit(*i)).map(|i| names[R::NAMED[i]]).collect(),
+            at_bound: (0..P)
+                .filter(|i| on_limit(*i))
+                .map(|i| names[R::NAMED[i]])
+                .collect(),
             fitted,
-            leverage: if covariance.is_some() { leverage } else { Vec::new() },
+            leverage: if covariance.is_some() {
+                leverage
+            } else {
+                Vec::new()
+            },
             extra_variance: self.variance * units.rate * units.rate,
             cost: solution.cost(),
             converged: true,
@@ -908,4 +706,185 @@ pub(super) fn spread<const P: usize>(covariance: &[[f64; P]; P], derivatives: &[
         }
     }
     sum.max(0.0)
+}
+
+#[cfg(test)]
+mod tests {
+    #![allow(clippy::unwrap_used)]
+    use super::*;
+
+    /// 30 levels twice, from a hyperbola, with a fixed ripple; drives from `first` on.
+    fn points(first: f64, scale: f64) -> Vec<Point> {
+        (0..60)
+            .map(|i| {
+                let x = f64::from(i / 2) * 20.0;
+                let clean = if x > 110.0 {
+                    90.0 * (x - 110.0) / (x + 40.0)
+                } else {
+                    0.0
+                };
+                let ripple = if clean > 0.0 {
+                    f64::from(i * 7 % 11 - 5) * 0.3
+                } else {
+                    0.0
+                };
+                Point {
+                    drive: first + scale * x,
+                    rate: (clean + ripple).max(0.0),
+                    se: 0.5 + 0.05 * f64::from(i % 4),
+                }
+            })
+            .collect()
+    }
+
+    #[test]
+    fn the_extra_variance_solves_its_equation_and_the_fitted_rates_are_the_curves() {
+        let points = points(0.0, 1.0);
+        for curve in Curve::ALL {
+            let fit = fit_rival(curve, &points, Scatter::Estimated).unwrap();
+            let sum: f64 = points
+                .iter()
+                .zip(&fit.fitted)
+                .map(|(p, f)| (p.rate - f).powi(2) / (p.se * p.se + fit.extra_variance))
+                .sum();
+            let degrees = (points.len() - curve.parameters()) as f64;
+            assert!((sum / degrees - 1.0).abs() < 1e-5, "{curve}: {sum} for {degrees}");
+            assert!((sum / fit.cost - 1.0).abs() < 1e-9, "{curve}");
+            for (p, f) in points.iter().zip(&fit.fitted) {
+                assert!(
+                    (fit.rate_at(p.drive) - f).abs() <= 1e-9 * (1.0 + f),
+                    "{curve} at {}",
+                    p.drive
+                );
+            }
+            // Leverages of the levels sum to the parameters that are free to move.
+            let leverage: f64 = fit.leverage.iter().step_by(2).sum();
+            assert!(
+                leverage > 0.9 && leverage < curve.parameters() as f64 + 1e-6,
+                "{curve}: {leverage}"
+            );
+            // At the weights it settled on, a search from scratch finds nothing better.
+            let held = fit_rival(curve, &points, Scatter::Held(fit.extra_variance)).unwrap();
+            assert!(
+                held.cost >= fit.cost * (1.0 - 1e-6),
+                "{curve}: {} {}",
+                held.cost,
+                fit.cost
+            );
+        }
+    }
+
+    #[test]
+    fn the_unit_of_drive_does_not_matter() {
+        // The refractory integrator counts drive from rest, so the zero stays.
+        for curve in Curve::ALL.into_iter().skip(1) {
+            let small = fit_rival(curve, &points(0.0, 1e-3), Scatter::Estimated).unwrap();
+            let large = fit_rival(curve, &points(0.0, 1e6), Scatter::Estimated).unwrap();
+            for (a, b) in small.fitted.iter().zip(&large.fitted) {
+                assert!((a - b).abs() < 1e-5 * (1.0 + a), "{curve}: {a} {b}");
+            }
+        }
+    }
+
+    #[test]
+    fn a_threshold_under_a_silent_drive_settles_on_it() {
+        // Silent to 100, then far above what a root that started at 100 would reach: the kink is the minimum.
+        let points: Vec<Point> = (0..12)
+            .map(|i| {
+                let drive = f64::from(i) * 20.0;
+                let rate = if drive > 100.0 {
+                    4.0 * (drive - 80.0).sqrt()
+                } else {
+                    0.0
+                };
+                Point { drive, rate, se: 0.3 }
+            })
+            .collect();
+        let fit = fit_rival(Curve::SquareRoot, &points, Scatter::Held(0.0)).unwrap();
+        let threshold = fit.values[1];
+        assert_eq!(fit.fitted[5], 0.0);
+        assert!((threshold - 100.0).abs() < 1e-9, "{threshold}");
+        assert!(fit.at_bound.is_empty());
+    }
+
+    #[test]
+    fn every_refusal_says_why() {
+        let good = points(0.0, 1.0);
+        let reason = |curve, points: &[Point]| {
+            fit_rival(curve, points, Scatter::Estimated)
+                .unwrap_err()
+                .to_string()
+        };
+        for curve in Curve::ALL {
+            assert!(
+                reason(curve, &[]).starts_with("0 steps"),
+                "{}",
+                reason(curve, &[])
+            );
+            let silent: Vec<Point> = good.iter().map(|p| Point { rate: 0.0, ..*p }).collect();
+            assert_eq!(reason(curve, &silent), "no step has a rate above zero");
+            let one_level: Vec<Point> = good.iter().map(|p| Point { drive: 5.0, ..*p }).collect();
+            assert!(reason(curve, &one_level).starts_with("1 distinct drives"));
+            let mut backwards = good.clone();
+            backwards.reverse();
+            assert!(reason(curve, &backwards).contains("order"));
+            for bad in [f64::NAN, f64::INFINITY, 0.0, -1.0, 1e-300] {
+                let mut points = good.clone();
+                points[7].se = bad;
+                assert!(reason(curve, &points).contains("not a point"), "{curve} {bad}");
+            }
+        }
+        let negative = points(-2000.0, 1.0);
+        assert!(reason(Curve::RefractoryIntegrator, &negative).contains("above zero"));
+        assert!(fit_rival(Curve::Hill, &negative, Scatter::Estimated).is_ok());
+    }
+
+    #[test]
+    fn wild_points_never_panic() {
+        // Jumps, constants, single spikes of rate, falling rates, few levels.
+        let shapes: [fn(f64) -> f64; 7] = [
+            |x| if x > 0.5 { 50.0 } else { 0.0 },
+            |_| 30.0,
+            |x| if (x - 0.5).abs() < 0.05 { 80.0 } else { 0.0 },
+            |x| 100.0 * (1.0 - x),
+            |x| 1e-9 * x,
+            |x| 1e9 * x * x * x,
+            |x| 20.0 + 10.0 * (40.0 * x).sin(),
+        ];
+        let mut fitted = 0;
+        for shape in shapes {
+            for count in [5, 6, 9, 31] {
+                for se in [1e-6, 0.3, 1e4] {
+                    for first in [-3.0, 0.0, 1e5] {
+                        let points: Vec<Point> = (0..count)
+                            .map(|i| {
+                                let x = f64::from(i) / f64::from(count - 1);
+                                Point {
+                                    drive: first + x,
+                                    rate: shape(x),
+                                    se,
+                                }
+                            })
+                            .collect();
+                        for curve in Curve::ALL.into_iter().skip(1) {
+                            for scatter in [Scatter::Estimated, Scatter::Held(0.0)] {
+                                if let Ok(fit) = fit_rival(curve, &points, scatter) {
+                                    fitted += 1;
+                                    assert!(fit.fitted.iter().all(|f| f.is_finite()), "{curve}");
+                                    assert!(
+                                        fit.values.iter().all(|v| !v.is_nan()),
+                                        "{curve} {:?}",
+                                        fit.values
+                                    );
+                                    assert!(fit.rate_at(-1e9).is_finite() && fit.rate_at(1e9).is_finite());
+                                }
+                            }
+                        }
+                    }
+                }
+            }
+        }
+        println!("{fitted} of 3528 fitted");
+        assert!(fitted > 2800, "{fitted}");
+    }
 }

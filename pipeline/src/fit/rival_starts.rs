@@ -156,7 +156,7 @@ impl Starts<3> for GainCeiling {
                 parameters: [gain.ln(), 0.0, threshold],
             });
         }
-        let reach = super::rival_fit::ends(levels).1 - threshold;
+        let reach = super::gaps::ends(levels).1 - threshold;
         for half in HALF_RISES.map(|part| part * reach) {
             let shape = |_, drive: f64| {
                 let above = (drive - threshold).max(0.0);
@@ -190,7 +190,7 @@ impl Starts<4> for Hill {
     }
 
     fn starts(levels: &Levels, threshold: f64, into: &mut Vec<Start<4>>) {
-        let reach = super::rival_fit::ends(levels).1 - threshold;
+        let reach = super::gaps::ends(levels).1 - threshold;
         if !(reach > 0.0) {
             return;
         }
@@ -221,7 +221,10 @@ impl Starts<4> for Hill {
             keep(Linear::fit(levels, |i, _| powers[i]), None);
             for half in HILL_HALF_RISES {
                 let at_half = half.powf(n);
-                keep(Linear::fit(levels, |i, _| powers[i] / (at_half + powers[i])), Some(half));
+                keep(
+                    Linear::fit(levels, |i, _| powers[i] / (at_half + powers[i])),
+                    Some(half),
+                );
             }
         }
     }
@@ -255,7 +258,10 @@ impl Starts<3> for RefractoryIntegrator {
             smt += w * m * time;
         }
         let determinant = n * smm - sm * sm;
-        let free = ((smm * st - sm * smt) / determinant, (n * smt - sm * st) / determinant);
+        let free = (
+            (smm * st - sm * smt) / determinant,
+            (n * smt - sm * st) / determinant,
+        );
         let through_zero = (0.0, smt / smm);
         for (refractory, per_gain) in [free, through_zero] {
             if refractory >= 0.0 && per_gain > 0.0 && per_gain.is_finite() {
@@ -288,7 +294,7 @@ impl Starts<3> for Logistic {
     }
 
     fn starts(levels: &Levels, _threshold: f64, into: &mut Vec<Start<3>>) {
-        let (lowest, _) = super::rival_fit::ends(levels);
+        let (lowest, _) = super::gaps::ends(levels);
         let half_way = thresholds(levels, 1.0, 1.0).into_iter().skip(2).take(1);
         for midpoint in MIDPOINTS.iter().map(|m| lowest + m).chain(half_way) {
             for scale in SCALES {
