@@ -51,12 +51,15 @@ impl<R> Cost<'_, R> {
         }
     }
 
-    /// A parameter that changes nothing here (a noise SD far below the spacing of the drives, a threshold below an all
-    /// but flat curve) would make the curvature singular and no step could be judged. Neither the cost nor its gradient
-    /// is touched, so the minimum stays where it is.
+    /// What keeps the stopping rules meaningful, and the minimum where it is. A parameter that changes nothing here (a
+    /// noise SD far below the spacing of the drives, a threshold below an all but flat curve) would make the curvature
+    /// singular: it gets a least curvature. And points that the curve meets exactly would leave no cost for a step to
+    /// be measured by: a constant stands for the rounding of the rates.
     #[inline(always)]
     fn support<const P: usize>(&self, sums: &mut NormalSums<P>) {
-        let floor = CURVATURE_FLOOR * self.levels.root_weights.iter().map(|w| w * w).sum::<f64>();
+        let weight: f64 = self.levels.root_weights.iter().map(|w| w * w).sum();
+        sums.cost += ROUNDING * weight;
+        let floor = CURVATURE_FLOOR * weight;
         for i in 0..P {
             sums.curvature[i][i] += floor;
         }
@@ -70,6 +73,9 @@ impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
         self.support(sums);
     }
 }
+
+/// Squared error of a rate, in peak rates, that counts as none.
+const ROUNDING: f64 = 1e-20;
 
 /// Least curvature of a parameter, as a fraction of what it has where one unit of it changes every rate by the peak.
 const CURVATURE_FLOOR: f64 = 1e-13;

@@ -645,6 +645,12 @@ impl<const P: usize> Search<'_, P> {
                 (at.rate * units.rate, variance * root * root)
             })
             .collect();
+        let squares: f64 = at_level
+            .iter()
+            .zip(&levels.rates)
+            .zip(&levels.root_weights)
+            .map(|(((fitted, _), rate), root)| (root * (rate - fitted / units.rate)).powi(2))
+            .sum();
         let (fitted, leverage): (Vec<f64>, Vec<f64>) = levels.level_of_point().map(|l| at_level[l]).unzip();
         let close = |index: usize| {
             // As close below a drive as the search goes: the points ask for a jump.
@@ -673,7 +679,7 @@ impl<const P: usize> Search<'_, P> {
                 Vec::new()
             },
             extra_variance: self.variance * units.rate * units.rate,
-            cost: solution.cost(),
+            cost: levels.within + squares,
             converged: true,
             evaluations: self.evaluations,
             chart: std::array::from_fn(pad),
