@@ -75,7 +75,7 @@ impl<const P: usize, R: RateFunction<P>> LeastSquares<P> for Cost<'_, R> {
 }
 
 /// Squared error of a rate, in peak rates, that counts as none.
-const ROUNDING: f64 = 1e-20;
+const ROUNDING: f64 = 1e-16;
 
 /// Least curvature of a parameter, as a fraction of what it has where one unit of it changes every rate by the peak.
 const CURVATURE_FLOOR: f64 = 1e-13;

@@ -857,40 +857,50 @@ mod tests {
             |x| 1e9 * x * x * x,
             |x| 20.0 + 10.0 * (40.0 * x).sin(),
         ];
-        let mut fitted = 0;
-        for shape in shapes {
-            for count in [5, 6, 9, 31] {
-                for se in [1e-6, 0.3, 1e4] {
-                    for first in [-3.0, 0.0, 1e5] {
-                        let points: Vec<Point> = (0..count)
-                            .map(|i| {
-                                let x = f64::from(i) / f64::from(count - 1);
-                                Point {
-                                    drive: first + x,
-                                    rate: shape(x),
-                                    se,
-                                }
-                            })
-                            .collect();
-                        for curve in Curve::ALL.into_iter().skip(1) {
-                            for scatter in [Scatter::Estimated, Scatter::Held(0.0)] {
-                                if let Ok(fit) = fit_rival(curve, &points, scatter) {
-                                    fitted += 1;
-                                    assert!(fit.fitted.iter().all(|f| f.is_finite()), "{curve}");
-                                    assert!(
-                                        fit.values.iter().all(|v| !v.is_nan()),
-                                        "{curve} {:?}",
-                                        fit.values
-                                    );
-                                    assert!(fit.rate_at(-1e9).is_finite() && fit.rate_at(1e9).is_finite());
-                                }
+        let (mut fitted, mut unsettled, mut exact) = (0, 0, 0);
+        for ((shape, noise), count) in shapes
+            .into_iter()
+            .flat_map(|shape| [(shape, 0.0), (shape, 0.01)])
+            .flat_map(|case| [5, 6, 9, 31].map(|count| (case, count)))
+        {
+            for (se, first) in [(1e-6, 0.0), (0.3, 0.0), (1e4, 0.0), (0.3, -3.0), (0.3, 1e5)] {
+                let points: Vec<Point> = (0..count)
+                    .map(|i| {
+                        let x = f64::from(i) / f64::from(count - 1);
+                        let rate = shape(x) * (1.0 + noise * f64::from(i * 7 % 5 - 2));
+                        Point {
+                            drive: first + x,
+                            rate,
+                            se,
+                        }
+                    })
+                    .collect();
+                for curve in Curve::ALL.into_iter().skip(1) {
+                    for scatter in [Scatter::Estimated, Scatter::Held(0.0)] {
+                        match fit_rival(curve, &points, scatter) {
+                            Ok(fit) => {
+                                fitted += 1;
+                                assert!(fit.fitted.iter().all(|f| f.is_finite()), "{curve}");
+                                assert!(fit.values.iter().all(|v| !v.is_nan()), "{curve} {:?}", fit.values);
+                                assert!(fit.rate_at(-1e9).is_finite() && fit.rate_at(1e9).is_finite());
                             }
+                            // Where the limit of a curve meets the points exactly, its valley has no floor.
+                            Err(Unfitted::NotSettled { .. }) if noise == 0.0 => exact += 1,
+                            Err(Unfitted::NotSettled { .. }) => {
+                                unsettled += 1;
+                                println!("{curve} {count} {se} {first} {} {scatter:?}", shape(0.3));
+                            }
+                            Err(Unfitted::TooFewPositiveDrives { .. }) => assert!(first < 0.0),
+                            Err(Unfitted::NoRate) => {
+                                assert_eq!(points.iter().map(|p| p.rate).fold(0.0, f64::max), 0.0)
+                            }
+                            Err(reason) => assert!(count <= 5, "{curve}: {reason}"),
                         }
                     }
                 }
             }
         }
-        println!("{fitted} of 3528 fitted");
-        assert!(fitted > 2800, "{fitted}");
+        println!("{fitted} fitted, {unsettled} not settled, {exact} not settled on points without noise");
+        assert!(unsettled * 100 <= fitted, "{unsettled}");
     }
 }
