@@ -28,7 +28,10 @@ use crate::curve::{Curve, RateFunction, Units};
 pub const MOST_PARAMETERS: usize = 4;
 
 /// Starts, in different gaps where there are gaps, that are followed to a local minimum.
-const STARTS_FOLLOWED: usize = 5;
+const STARTS_FOLLOWED: usize = 4;
+
+/// The same for curves without a kink, which have fewer minima.
+const SMOOTH_STARTS_FOLLOWED: usize = 3;
 
 /// Rise of the cost beyond twice the best above which a gap holds no start worth following.
 const HOPELESS: f64 = 10.0;
@@ -522,7 +525,7 @@ impl<const P: usize> Search<'_, P> {
         let Some(index) = R::THRESHOLD else {
             R::starts(levels, f64::NAN, &mut all);
             all.sort_by(|a, b| a.cost.total_cmp(&b.cost));
-            all.truncate(STARTS_FOLLOWED);
+            all.truncate(SMOOTH_STARTS_FOLLOWED);
             return all;
         };
         let (lower, upper) = (self.options.lower[index], self.options.upper[index]);

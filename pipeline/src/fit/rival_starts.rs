@@ -80,20 +80,8 @@ impl Linear {
             sums.total += y * y;
         }
         let factor = sums.cross / sums.square;
-        (factor > 0.0 && factor.is_finite()).then(|| (factor, sums.total - factor * sums.cross))
+        (factor > 0.0 && factor.is_finite()).then_some((factor, sums.total - factor * sums.cross))
     }
-}
-
-/// Cost of a prepared curve.
-fn cost_of<const P: usize, R: RateFunction<P>>(levels: &Levels, parameters: &[f64; P]) -> f64 {
-    let curve = R::new(parameters);
-    levels
-        .drives
-        .iter()
-        .zip(&levels.rates)
-        .zip(&levels.root_weights)
-        .map(|((drive, rate), root)| (root * (rate - curve.at(*drive).rate)).powi(2))
-        .sum()
 }
 
 /// Half-rises tried, as parts of the drives above the threshold; none at all comes first.
@@ -173,9 +161,9 @@ impl Starts<3> for GainCeiling {
 }
 
 /// Exponents tried.
-const EXPONENTS: [f64; 5] = [0.6, 1.0, 1.8, 3.5, 8.0];
+const EXPONENTS: [f64; 4] = [0.7, 1.3, 2.5, 6.0];
 /// Half-rises tried with them.
-const HILL_HALF_RISES: [f64; 4] = [0.12, 0.35, 0.8, 2.0];
+const HILL_HALF_RISES: [f64; 3] = [0.15, 0.5, 1.5];
 
 impl Starts<4> for Hill {
     const PARTS: &'static [f64] = &[0.5];
@@ -231,7 +219,7 @@ impl Starts<4> for Hill {
 }
 
 impl Starts<3> for RefractoryIntegrator {
-    const PARTS: &'static [f64] = &[0.0, 0.4, 0.8, 0.97];
+    const PARTS: &'static [f64] = &[0.0, 0.5, 0.95];
     const INFINITE_SLOPE: bool = true;
     const NAMED: [usize; 3] = [0, 1, 2];
 
@@ -243,13 +231,17 @@ impl Starts<3> for RefractoryIntegrator {
     fn starts(levels: &Levels, threshold: f64, into: &mut Vec<Start<3>>) {
         // 1/rate is linear in the refractory time and 1/gain: weights by the delta method.
         let unit = Self::new(&[0.0, 0.0, threshold]);
+        let times: Vec<f64> = levels
+            .drives
+            .iter()
+            .map(|drive| 1.0 / unit.at(*drive).rate)
+            .collect();
         let (mut n, mut sm, mut smm, mut st, mut smt) = (0.0, 0.0, 0.0, 0.0, 0.0);
-        for ((drive, rate), root) in levels.drives.iter().zip(&levels.rates).zip(&levels.root_weights) {
-            let shape = unit.at(*drive).rate;
-            if !(shape > 0.0 && *rate > 0.02) {
+        for ((m, rate), root) in times.iter().zip(&levels.rates).zip(&levels.root_weights) {
+            if !(m.is_finite() && *rate > 0.02) {
                 continue;
             }
-            let (m, time) = (1.0 / shape, 1.0 / rate);
+            let time = 1.0 / rate;
             let w = (root * rate * rate).powi(2);
             n += w;
             sm += w * m;
@@ -265,10 +257,16 @@ impl Starts<3> for RefractoryIntegrator {
         let through_zero = (0.0, smt / smm);
         for (refractory, per_gain) in [free, through_zero] {
             if refractory >= 0.0 && per_gain > 0.0 && per_gain.is_finite() {
-                let parameters = [refractory, -per_gain.ln(), threshold];
+                // Below the threshold the time is infinite and the rate zero.
+                let cost = times
+                    .iter()
+                    .zip(&levels.rates)
+                    .zip(&levels.root_weights)
+                    .map(|((m, rate), root)| (root * (rate - 1.0 / (refractory + m * per_gain))).powi(2))
+                    .sum();
                 into.push(Start {
-                    cost: cost_of::<3, Self>(levels, &parameters),
-                    parameters,
+                    cost,
+                    parameters: [refractory, -per_gain.ln(), threshold],
                 });
                 return;
             }
