@@ -14,7 +14,7 @@ use super::gaps::{Cost, Gap, Rival, descend, ends, gap_of, minimise_in_gap};
 use super::main_fit::{self, MainFit, Scatter, covariance};
 use super::objective::{Chart, Levels, Point, evaluate};
 use super::rival_starts::Start;
-use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions, minimise};
+use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions, cholesky_solve, minimise};
 use crate::curve::hill::Hill;
 use crate::curve::hyperbola::GainCeiling;
 use crate::curve::logistic::Logistic;
@@ -36,7 +36,7 @@ const SMOOTH_STARTS_FOLLOWED: usize = 3;
 /// Rise of the cost beyond twice the best above which a gap holds no start worth following.
 const HOPELESS: f64 = 10.0;
 
-/// A rough search that ends above the best by more than this factor is not taken to its minimum.
+/// A rough search that promises no more than this factor of the best is not taken to its minimum.
 const PROMISING: f64 = 1.15;
 
 /// Times that the search may switch to another local minimum once the weights have changed.
@@ -404,7 +404,7 @@ impl<const P: usize> Search<'_, P> {
         let mut best = *followed.first()?;
         if !self.estimated {
             for i in 0..followed.len() {
-                if followed[i].cost() < best.cost() * PROMISING {
+                if promised(&followed[i]) < best.cost() * PROMISING {
                     let found = self.descend::<R>(followed[i].parameters, &options);
                     if found.cost() < best.cost() || (i == 0 && found.cost() <= best.cost()) {
                         best = found;
@@ -440,7 +440,7 @@ impl<const P: usize> Search<'_, P> {
             self.follow::<R>(&mut followed);
             let mut improved = false;
             for i in 0..followed.len() {
-                if same(&followed[i], &best) || !(followed[i].cost() < best.cost() * PROMISING) {
+                if same(&followed[i], &best) || !(promised(&followed[i]) < best.cost() * PROMISING) {
                     continue;
                 }
                 let found = self.descend::<R>(followed[i].parameters, &options);
@@ -480,16 +480,20 @@ impl<const P: usize> Search<'_, P> {
             return;
         }
         let drives = &self.levels.drives;
-        let met: Vec<usize> = match R::THRESHOLD {
+        let met: Vec<(usize, f64)> = match R::THRESHOLD {
             Some(index) => known
                 .iter()
-                .map(|f| gap_of(drives, f.parameters[index]))
+                .map(|f| (gap_of(drives, f.parameters[index]), f.cost()))
                 .collect(),
             None => Vec::new(),
         };
         for start in self.starts::<R>() {
-            let in_known_gap =
-                |index: usize| met.contains(&gap_of(&self.levels.drives, start.parameters[index]));
+            // A gap with a better place than this start has been looked at.
+            let in_known_gap = |index: usize| {
+                let gap = gap_of(&self.levels.drives, start.parameters[index]);
+                let cost = start.cost + self.levels.within;
+                met.iter().any(|(known, least)| *known == gap && *least <= cost)
+            };
             if again && R::THRESHOLD.is_some_and(in_known_gap) {
                 continue;
             }
@@ -691,6 +695,16 @@ impl<const P: usize> Search<'_, P> {
             main: None,
         }
     }
+}
+
+/// The cost that the next Gauss-Newton step from the end of a rough search, or from a minimum at other weights,
+/// promises.
+fn promised<const P: usize>(found: &Solution<P>) -> f64 {
+    let step = cholesky_solve(&found.sums.curvature, &found.sums.gradient);
+    let decrease: f64 = step.map_or(f64::INFINITY, |step| {
+        step.iter().zip(&found.sums.gradient).map(|(s, g)| s * g).sum()
+    });
+    found.cost() - decrease
 }
 
 /// Whether two ends of a search are the same minimum, to what a rough search can tell.
