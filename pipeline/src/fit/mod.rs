@@ -4,6 +4,7 @@ pub mod bootstrap;
 pub mod bootstrap_interval;
 mod estimates;
 mod extra_sd;
+mod gaps;
 pub mod hyperbola_fit;
 pub mod leave_one_out;
 pub mod main_fit;

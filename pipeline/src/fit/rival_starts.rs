@@ -23,6 +23,9 @@ pub(super) struct Start<const P: usize> {
 pub(super) trait Starts<const P: usize> {
     /// Where in a gap between two drives a threshold is tried, as a part of the gap.
     const PARTS: &'static [f64];
+    /// Whether the slope at the threshold is infinite, so that the threshold is searched by the logarithm of its
+    /// distance from the drive above.
+    const INFINITE_SLOPE: bool;
     /// For each chart parameter the index of the natural one whose limit it is.
     const NAMED: [usize; P];
     /// Lower and upper limits of the chart's parameters for drives from `lowest` to `highest`.
@@ -77,20 +80,8 @@ impl Linear {
             sums.total += y * y;
         }
         let factor = sums.cross / sums.square;
-        (factor > 0.0 && factor.is_finite()).then(|| (factor, sums.total - factor * sums.cross))
+        (factor > 0.0 && factor.is_finite()).then_some((factor, sums.total - factor * sums.cross))
     }
-}
-
-/// Cost of a prepared curve.
-fn cost_of<const P: usize, R: RateFunction<P>>(levels: &Levels, parameters: &[f64; P]) -> f64 {
-    let curve = R::new(parameters);
-    levels
-        .drives
-        .iter()
-        .zip(&levels.rates)
-        .zip(&levels.root_weights)
-        .map(|((drive, rate), root)| (root * (rate - curve.at(*drive).rate)).powi(2))
-        .sum()
 }
 
 /// Half-rises tried, as parts of the drives above the threshold; none at all comes first.
@@ -98,6 +89,7 @@ const HALF_RISES: [f64; 4] = [0.08, 0.3, 1.0, 3.0];
 
 impl Starts<2> for Ramp {
     const PARTS: &'static [f64] = &[0.0, 0.5];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 2] = [0, 1];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 2], [f64; 2]) {
@@ -116,6 +108,7 @@ impl Starts<2> for Ramp {
 
 impl Starts<2> for SquareRoot {
     const PARTS: &'static [f64] = &[0.0, 0.4, 0.8, 0.97];
+    const INFINITE_SLOPE: bool = true;
     const NAMED: [usize; 2] = [0, 1];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 2], [f64; 2]) {
@@ -134,6 +127,7 @@ impl Starts<2> for SquareRoot {
 
 impl Starts<3> for GainCeiling {
     const PARTS: &'static [f64] = &[0.0, 0.5];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 3] = [1, 0, 2];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
@@ -150,7 +144,7 @@ impl Starts<3> for GainCeiling {
                 parameters: [gain.ln(), 0.0, threshold],
             });
         }
-        let reach = super::rival_fit::ends(levels).1 - threshold;
+        let reach = super::gaps::ends(levels).1 - threshold;
         for half in HALF_RISES.map(|part| part * reach) {
             let shape = |_, drive: f64| {
                 let above = (drive - threshold).max(0.0);
@@ -167,12 +161,13 @@ impl Starts<3> for GainCeiling {
 }
 
 /// Exponents tried.
-const EXPONENTS: [f64; 5] = [0.6, 1.0, 1.8, 3.5, 8.0];
+const EXPONENTS: [f64; 4] = [0.7, 1.3, 2.5, 6.0];
 /// Half-rises tried with them.
-const HILL_HALF_RISES: [f64; 4] = [0.12, 0.35, 0.8, 2.0];
+const HILL_HALF_RISES: [f64; 3] = [0.15, 0.5, 1.5];
 
 impl Starts<4> for Hill {
     const PARTS: &'static [f64] = &[0.5];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 4] = [0, 1, 2, 3];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 4], [f64; 4]) {
@@ -183,7 +178,7 @@ impl Starts<4> for Hill {
     }
 
     fn starts(levels: &Levels, threshold: f64, into: &mut Vec<Start<4>>) {
-        let reach = super::rival_fit::ends(levels).1 - threshold;
+        let reach = super::gaps::ends(levels).1 - threshold;
         if !(reach > 0.0) {
             return;
         }
@@ -224,7 +219,8 @@ impl Starts<4> for Hill {
 }
 
 impl Starts<3> for RefractoryIntegrator {
-    const PARTS: &'static [f64] = &[0.0, 0.4, 0.8, 0.97];
+    const PARTS: &'static [f64] = &[0.0, 0.5, 0.95];
+    const INFINITE_SLOPE: bool = true;
     const NAMED: [usize; 3] = [0, 1, 2];
 
     fn bounds(_lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
@@ -235,13 +231,17 @@ impl Starts<3> for RefractoryIntegrator {
     fn starts(levels: &Levels, threshold: f64, into: &mut Vec<Start<3>>) {
         // 1/rate is linear in the refractory time and 1/gain: weights by the delta method.
         let unit = Self::new(&[0.0, 0.0, threshold]);
+        let times: Vec<f64> = levels
+            .drives
+            .iter()
+            .map(|drive| 1.0 / unit.at(*drive).rate)
+            .collect();
         let (mut n, mut sm, mut smm, mut st, mut smt) = (0.0, 0.0, 0.0, 0.0, 0.0);
-        for ((drive, rate), root) in levels.drives.iter().zip(&levels.rates).zip(&levels.root_weights) {
-            let shape = unit.at(*drive).rate;
-            if !(shape > 0.0 && *rate > 0.02) {
+        for ((m, rate), root) in times.iter().zip(&levels.rates).zip(&levels.root_weights) {
+            if !(m.is_finite() && *rate > 0.02) {
                 continue;
             }
-            let (m, time) = (1.0 / shape, 1.0 / rate);
+            let time = 1.0 / rate;
             let w = (root * rate * rate).powi(2);
             n += w;
             sm += w * m;
@@ -257,10 +257,16 @@ impl Starts<3> for RefractoryIntegrator {
         let through_zero = (0.0, smt / smm);
         for (refractory, per_gain) in [free, through_zero] {
             if refractory >= 0.0 && per_gain > 0.0 && per_gain.is_finite() {
-                let parameters = [refractory, -per_gain.ln(), threshold];
+                // Below the threshold the time is infinite and the rate zero.
+                let cost = times
+                    .iter()
+                    .zip(&levels.rates)
+                    .zip(&levels.root_weights)
+                    .map(|((m, rate), root)| (root * (rate - 1.0 / (refractory + m * per_gain))).powi(2))
+                    .sum();
                 into.push(Start {
-                    cost: cost_of::<3, Self>(levels, &parameters),
-                    parameters,
+                    cost,
+                    parameters: [refractory, -per_gain.ln(), threshold],
                 });
                 return;
             }
@@ -275,6 +281,7 @@ const SCALES: [f64; 4] = [0.02, 0.07, 0.18, 0.5];
 
 impl Starts<3> for Logistic {
     const PARTS: &'static [f64] = &[];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 3] = [0, 1, 2];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
@@ -285,7 +292,7 @@ impl Starts<3> for Logistic {
     }
 
     fn starts(levels: &Levels, _threshold: f64, into: &mut Vec<Start<3>>) {
-        let (lowest, _) = super::rival_fit::ends(levels);
+        let (lowest, _) = super::gaps::ends(levels);
         let half_way = thresholds(levels, 1.0, 1.0).into_iter().skip(2).take(1);
         for midpoint in MIDPOINTS.iter().map(|m| lowest + m).chain(half_way) {
             for scale in SCALES {
@@ -307,6 +314,7 @@ const NOISES: [f64; 4] = [0.003, 0.02, 0.07, 0.2];
 
 impl Starts<3> for SmoothedRamp {
     const PARTS: &'static [f64] = &[];
+    const INFINITE_SLOPE: bool = false;
     const NAMED: [usize; 3] = [0, 1, 2];
 
     fn bounds(lowest: f64, highest: f64) -> ([f64; 3], [f64; 3]) {
