@@ -3,6 +3,7 @@
 mod estimates;
 mod extra_sd;
 pub mod hyperbola_fit;
+pub mod inhibition;
 pub mod main_fit;
 pub mod objective;
 mod profile;
@@ -12,5 +13,6 @@ mod starts;
 pub use estimates::{Estimate, Estimates, estimates, t_quantile};
 pub use extra_sd::extra_variance;
 pub use hyperbola_fit::{HyperbolaFit, fit_hyperbola};
+pub use inhibition::{InhibitionFit, InhibitionPoint, fit_inhibition};
 pub use objective::Point;
 pub use profile::{Side, SideSearch};
