@@ -2,6 +2,7 @@
 
 pub mod flags;
 pub mod goodness;
+pub mod inhibition;
 pub mod verdict;
 
 use std::sync::Arc;
