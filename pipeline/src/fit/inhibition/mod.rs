@@ -108,6 +108,9 @@ pub struct FormFit {
     pub degrees: f64,
     /// Weighted sum of squares at the minimum.
     pub cost: f64,
+    /// Least weighted sum of squares of the relation at this form's weights; `None` for the relation itself, and where
+    /// it could not be fitted.
+    pub relation_cost: Option<f64>,
     /// Whether the solver and the extra variance converged; if not, no number is to be reported.
     pub converged: bool,
     /// Passes of the curve over all points.
@@ -300,23 +303,30 @@ pub fn fit_inhibition(points: &[InhibitionPoint], constants: &CellConstants, pro
             search::search::<5>(law, &as_points, &joint, &starts).ok_or_else(|| too_few(Form::Divisive))
         }
     };
+    let base_law = relation.as_ref().ok().map(|found| (found.law, found.solution.parameters));
     InhibitionFit {
         relation: relation.map(|mut found| {
             let (estimates, covariance) = finish(&as_points, &mut found, profiles);
             let curve = Curve::Four(found.law, found.solution.parameters, covariance);
-            form_fit(&as_points, &found, estimates, covariance, curve)
+            form_fit(&as_points, &found, estimates, covariance, curve, None)
         }),
-        free_slope: free_slope.map(|found| five(&as_points, found, profiles)),
-        divisive: divisive.map(|found| five(&as_points, found, profiles)),
+        free_slope: free_slope.map(|found| five(&as_points, found, base_law.as_ref(), profiles)),
+        divisive: divisive.map(|found| five(&as_points, found, base_law.as_ref(), profiles)),
         inhibition_levels,
         order,
     }
 }
 
-fn five(points: &[Point], mut found: Found<5>, profiles: bool) -> FormFit {
+fn five(
+    points: &[Point],
+    mut found: Found<5>,
+    relation: Option<&(Law, [f64; 4])>,
+    profiles: bool,
+) -> FormFit {
     let (estimates, covariance) = finish(points, &mut found, profiles);
     let curve = Curve::Five(found.law, found.solution.parameters, covariance);
-    form_fit(points, &found, estimates, covariance, curve)
+    let relation_cost = relation.and_then(|(law, near)| search::cost_at_weights(law, &mut found, *near));
+    form_fit(points, &found, estimates, covariance, curve, relation_cost)
 }
 
 /// Estimates, and the covariance for the band: a noise SD that the data do not determine within a factor of e is held.
@@ -341,6 +351,7 @@ fn form_fit<const P: usize>(
     estimates: JointEstimates,
     covariance: Option<[[f64; P]; P]>,
     curve: Curve,
+    relation_cost: Option<f64>,
 ) -> FormFit {
     let at = &found.solution.parameters;
     let fifth = at.get(4).copied().unwrap_or(0.0);
@@ -372,6 +383,7 @@ fn form_fit<const P: usize>(
         extra_variance: found.extra_variance,
         degrees: found.degrees,
         cost: found.solution.cost(),
+        relation_cost,
         converged: found.converged,
         evaluations: found.evaluations,
         points,
@@ -419,4 +431,4 @@ fn check_points(points: &[InhibitionPoint]) -> Result<(), Unfit> {
 }
 
 #[cfg(test)]
-mod tests;
+pub(crate) mod tests;

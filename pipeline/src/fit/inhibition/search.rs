@@ -21,6 +21,8 @@ const THRESHOLD_ABOVE: f64 = 1.0;
 const SLOPE_BOUND: f64 = 10.0;
 /// Largest b, as a multiple of 1/largest inhibition.
 const DIVISION_BOUND: f64 = 1e3;
+/// What a move of one stride is charged, in units of the cost: little against any interval, where the rise is 4.
+const STRIDE_CHARGE: f64 = 1e-4;
 /// Longest step of a profile in V_t, mV.
 const POTENTIAL_STRIDE: f64 = 5.0;
 
@@ -99,6 +101,46 @@ pub(super) fn again_from<const P: usize>(points: &[Point], found: &mut Found<P>,
     );
 }
 
+/// The least cost of the relation at the weights of a wider form: from where the relation lay at its own weights, and
+/// from the wider form's curve. `None` where no search converged.
+pub(super) fn cost_at_weights(law: &Law, wider: &mut Found<5>, near: [f64; 4]) -> Option<f64> {
+    let points = wider.joint.groups.iter().flat_map(|g| &g.levels.rates);
+    let peak = points.copied().fold(0.0, f64::max);
+    let options = SolverOptions {
+        // A statistic needs three digits.
+        decrease_tolerance: 1e-7,
+        ..bounds::<4>(law, &wider.joint, peak)
+    };
+    let objective = Objective {
+        joint: &wider.joint,
+        law,
+        chart: Chart::Ceiling,
+        rough: false,
+    };
+    let [q, c, third, noise, fifth] = wider.solution.parameters;
+    let mut starts = vec![near];
+    match (wider.law, law.membrane()) {
+        (Law::FreeSlope, Some(m)) => {
+            for group in &wider.joint.groups {
+                let potential = m.steady_potential(third + fifth * group.g_inh, group.g_inh);
+                if potential > m.e_inh_mv() && potential < m.e_exc_mv() {
+                    starts.push([q, c, potential, noise]);
+                }
+            }
+        }
+        _ => starts.push([q, c, third, noise]),
+    }
+    let mut least: Option<f64> = None;
+    for start in starts {
+        let found = minimise(&objective, start, &options);
+        wider.evaluations += found.evaluations;
+        if found.converged && least.is_none_or(|l| found.cost() < l) {
+            least = Some(found.cost());
+        }
+    }
+    least
+}
+
 fn bounds<const P: usize>(law: &Law, joint: &Joint, peak: f64) -> SolverOptions<P> {
     let drives = || joint.groups.iter().flat_map(|g| &g.levels.drives).copied();
     let (lowest, highest) = (
@@ -135,7 +177,7 @@ fn bounds<const P: usize>(law: &Law, joint: &Joint, peak: f64) -> SolverOptions<
         Law::Divisive(_) => ([0.0, DIVISION_BOUND / most], 1.0 / most),
     };
     let pick = |four: [f64; 4], fifth: f64| std::array::from_fn(|i| four.get(i).copied().unwrap_or(fifth));
-    SolverOptions {
+    let options = SolverOptions {
         lower: pick([steepest, 0.0, third[0], noise[0]], fifth[0]),
         upper: pick([flattest, CEILING_BOUND / peak, third[1], noise[1]], fifth[1]),
         decrease_tolerance: 1e-11,
@@ -143,6 +185,11 @@ fn bounds<const P: usize>(law: &Law, joint: &Joint, peak: f64) -> SolverOptions<
         max_iterations: 400,
         stride: pick([0.5 * range / peak, 0.5 / peak, stride, 1.0], fifth_stride),
         ..SolverOptions::default()
+    };
+    // A noise SD below the spacing of the levels leaves kinks, across which it and the threshold leap to and fro.
+    SolverOptions {
+        ridge: options.ridge_of(STRIDE_CHARGE),
+        ..options
     }
 }
 

@@ -6,7 +6,7 @@ use rand_distr::{Distribution, StandardNormal};
 use super::*;
 use crate::curve::smoothed_hyperbola;
 
-const CONSTANTS: CellConstants = CellConstants {
+pub(crate) const CONSTANTS: CellConstants = CellConstants {
     g_leak_ns: Some(10.0),
     e_leak_mv: Some(-70.0),
     e_exc_mv: Some(0.0),
@@ -14,20 +14,20 @@ const CONSTANTS: CellConstants = CellConstants {
     v_threshold_mv: None,
     capacitance_pf: None,
 };
-const INHIBITION: [f64; 4] = [0.0, 6.0, 12.0, 20.0];
+pub(crate) const INHIBITION: [f64; 4] = [0.0, 6.0, 12.0, 20.0];
 
 /// What generates rates: max rate, half-rise, V_t, noise SD, change of the threshold per nS beyond the relation, b.
 #[derive(Clone, Copy)]
-struct Truth {
-    max_rate: f64,
-    half_rise: f64,
-    v_t: f64,
-    noise: f64,
-    more_slope: f64,
-    b: f64,
+pub(crate) struct Truth {
+    pub(crate) max_rate: f64,
+    pub(crate) half_rise: f64,
+    pub(crate) v_t: f64,
+    pub(crate) noise: f64,
+    pub(crate) more_slope: f64,
+    pub(crate) b: f64,
 }
 
-const TRUTH: Truth = Truth {
+pub(crate) const TRUTH: Truth = Truth {
     max_rate: 90.0,
     half_rise: 14.0,
     v_t: -48.0,
@@ -36,7 +36,7 @@ const TRUTH: Truth = Truth {
     b: 0.0,
 };
 
-fn simulate(truth: Truth, scatter: f64, seed: u64, inhibition: &[f64]) -> Vec<InhibitionPoint> {
+pub(crate) fn simulate(truth: Truth, scatter: f64, seed: u64, inhibition: &[f64]) -> Vec<InhibitionPoint> {
     let membrane = Membrane::from_constants(&CONSTANTS).unwrap();
     let mut rng = ChaCha8Rng::seed_from_u64(seed);
     let mut points = Vec::new();
