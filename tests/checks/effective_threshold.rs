@@ -122,7 +122,10 @@ fn integrate_and_fire_cells_give_their_threshold_potential_back() {
         let m = Membrane::from_constants(&cell.constants).unwrap();
         let slope = threshold_per_inhibition(truth, &m).unwrap().value;
         let found = row.slope_found.value.unwrap();
-        assert!((slope - 0.15..slope + 0.05).contains(&found), "{found} against {slope}");
+        assert!(
+            (slope - 0.15..slope + 0.05).contains(&found),
+            "{found} against {slope}"
+        );
         let set = if cell.set == "near" { &mut near } else { &mut deep };
         set.errors.push((value - truth).abs());
         set.within += usize::from(lo - 1.0 <= truth && truth <= hi + 1.0);

@@ -172,13 +172,20 @@ mod tests {
         let (expected, found) = (a.slope_expected, a.slope_found);
         let truth = 27.0 / 48.0;
         for slope in [expected, found] {
-            assert!(slope.lo.unwrap() < truth && truth < slope.hi.unwrap(), "{slope:?}");
+            assert!(
+                slope.lo.unwrap() < truth && truth < slope.hi.unwrap(),
+                "{slope:?}"
+            );
         }
         // The relation uses the leak too: it knows the slope better.
         assert!(expected.se.unwrap() < found.se.unwrap());
         assert!(a.divisive.lo.unwrap() >= 0.0 && a.divisive.hi.unwrap() < 0.02);
         assert_eq!(a.goodness.len(), 3);
-        assert!(a.goodness.iter().all(|g| g.loo_rmse_hz.is_some() && g.steps == 64));
+        assert!(
+            a.goodness
+                .iter()
+                .all(|g| g.loo_rmse_hz.is_some() && g.steps == 64)
+        );
         let b = assessed(Truth { b: 0.05, ..TRUTH }, 1, true);
         let [lo, hi] = [b.divisive.lo, b.divisive.hi].map(Option::unwrap);
         assert!(lo < 0.05 && 0.05 < hi && lo > 0.04 && hi < 0.06, "{lo} {hi}");
@@ -207,7 +214,10 @@ mod tests {
         assert!((likelihood_ratio(3.841_458_8, 10.0, false).unwrap().p_many_steps - 0.05).abs() < 1e-7);
         assert!((likelihood_ratio(2.705_543_5, 10.0, true).unwrap().p_many_steps - 0.05).abs() < 1e-7);
         let nothing = likelihood_ratio(-1e-9, 10.0, true).unwrap();
-        assert_eq!((nothing.statistic, nothing.p, nothing.p_many_steps), (0.0, 1.0, 1.0));
+        assert_eq!(
+            (nothing.statistic, nothing.p, nothing.p_many_steps),
+            (0.0, 1.0, 1.0)
+        );
         assert_eq!(likelihood_ratio(f64::NAN, 10.0, false), None);
         assert_eq!(likelihood_ratio(1.0, 0.0, false), None);
     }

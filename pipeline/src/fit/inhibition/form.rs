@@ -103,7 +103,9 @@ impl Law {
         let fifth = parameters.get(4).copied().unwrap_or(0.0);
         local.parameters[2] = self.threshold(parameters[2], fifth, g_inh);
         match self {
-            Self::Relation(m) | Self::Divisive(m) => local.by[2][2] = m.threshold_slope_at(g_inh, parameters[2]),
+            Self::Relation(m) | Self::Divisive(m) => {
+                local.by[2][2] = m.threshold_slope_at(g_inh, parameters[2])
+            }
             Self::FreeSlope => {
                 if let Some(by) = local.by[2].get_mut(4) {
                     *by = g_inh;

@@ -164,16 +164,7 @@ fn attempt<const P: usize>(found: &mut Found<P>, profiles: bool) -> Result<Joint
         };
         let (best, options) = in_half_rise_chart(found, &objective);
         let mut side = |direction| {
-            end(
-                &objective,
-                &best,
-                &options,
-                1,
-                direction,
-                limit,
-                &mut evaluations,
-            )
-            .map_err(|mut point| {
+            end(&objective, &best, &options, 1, direction, limit, &mut evaluations).map_err(|mut point| {
                 point[1] *= point[0];
                 point
             })

@@ -184,7 +184,11 @@ mod tests {
             for second in [0.01, 0.04] {
                 check(&Law::Relation(membrane), chart, [0.12, second, -50.0, noise]);
                 check(&Law::FreeSlope, chart, [0.12, second, 4.0, noise, 0.6]);
-                check(&Law::Divisive(membrane), chart, [0.12, second, -50.0, noise, 0.05]);
+                check(
+                    &Law::Divisive(membrane),
+                    chart,
+                    [0.12, second, -50.0, noise, 0.05],
+                );
             }
         }
     }

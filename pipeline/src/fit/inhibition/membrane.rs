@@ -36,7 +36,9 @@ pub enum MembraneError {
         value: f64,
     },
     /// Two reversal potentials are out of order.
-    #[error("{name} = {value} mV is not below e_exc = {limit} mV: correct the reversal potentials in the cell table, or check their units")]
+    #[error(
+        "{name} = {value} mV is not below e_exc = {limit} mV: correct the reversal potentials in the cell table, or check their units"
+    )]
     OutOfOrder {
         /// The one that must be lower.
         name: &'static str,
@@ -46,7 +48,9 @@ pub enum MembraneError {
         limit: f64,
     },
     /// A spike threshold potential is outside the reversal potentials.
-    #[error("spike threshold potential {value} mV is not between e_inh = {lowest} mV and e_exc = {highest} mV: the membrane cannot be held there by inhibition and excitation; correct the potentials in the cell table")]
+    #[error(
+        "spike threshold potential {value} mV is not between e_inh = {lowest} mV and e_exc = {highest} mV: the membrane cannot be held there by inhibition and excitation; correct the potentials in the cell table"
+    )]
     ThresholdOutside {
         /// The potential, mV.
         value: f64,
@@ -56,7 +60,9 @@ pub enum MembraneError {
         highest: f64,
     },
     /// A conductance is negative or not finite.
-    #[error("inhibitory conductance {value} nS is not a finite number of 0 nS or more: correct g_inh in the protocol")]
+    #[error(
+        "inhibitory conductance {value} nS is not a finite number of 0 nS or more: correct g_inh in the protocol"
+    )]
     BadInhibition {
         /// The value, nS.
         value: f64,
@@ -117,9 +123,7 @@ impl Membrane {
             constants.e_exc_mv,
             constants.e_inh_mv,
         ) {
-            (Some(g_leak), Some(e_leak), Some(e_exc), Some(e_inh)) => {
-                Self::new(g_leak, e_leak, e_exc, e_inh)
-            }
+            (Some(g_leak), Some(e_leak), Some(e_exc), Some(e_inh)) => Self::new(g_leak, e_leak, e_exc, e_inh),
             (g_leak, e_leak, e_exc, e_inh) => Err(missing(&[
                 ("g_leak", g_leak),
                 ("e_leak", e_leak),
@@ -372,7 +376,11 @@ mod tests {
             (Some(-50.0), Some(0.5), Some(-51.0), Some(f64::INFINITY))
         );
         let error = threshold_potential_from_rheobase(&current, &CellConstants::default()).unwrap_err();
-        assert!(error.to_string().starts_with("g_leak, e_leak not known: give them"));
+        assert!(
+            error
+                .to_string()
+                .starts_with("g_leak, e_leak not known: give them")
+        );
     }
 
     #[test]
@@ -381,7 +389,9 @@ mod tests {
         assert!(text(Membrane::new(0.0, -70.0, 0.0, -75.0)).contains("g_leak = 0 nS is not above 0 nS"));
         assert!(text(Membrane::new(-3.0, -70.0, 0.0, -75.0)).contains("-3 nS"));
         assert!(text(Membrane::new(f64::NAN, -70.0, 0.0, -75.0)).contains("g_leak = NaN"));
-        assert!(text(Membrane::new(10.0, 5.0, 0.0, -75.0)).contains("e_leak = 5 mV is not below e_exc = 0 mV"));
+        assert!(
+            text(Membrane::new(10.0, 5.0, 0.0, -75.0)).contains("e_leak = 5 mV is not below e_exc = 0 mV")
+        );
         assert!(text(Membrane::new(10.0, -70.0, -80.0, -75.0)).contains("not below e_exc = -80 mV"));
         assert!(text(Membrane::new(10.0, -70.0, 0.0, 0.0)).contains("e_inh = 0 mV"));
         let one = CellConstants {

@@ -3,6 +3,11 @@
 //! [`membrane`] is the relation between leak, inhibition and threshold, [`form`] the three ways in which inhibition may
 //! enter the rate function; the fits themselves follow the main fit in everything else: the same curve, chart,
 //! solver, extra SD and profile intervals.
+//!
+//! The relation is that of a membrane held *at* V_t. A cell that fires is reset and spends its time below, and a fit
+//! over all its rates finds a potential between the middle of reset and threshold, where the curve far above threshold
+//! points, and V_t itself. In simulated integrate-and-fire cells it lay 0.75 mV below V_t for resets of 1 to 3 mV and
+//! 1.7 mV for 8 to 15 mV, more than the intervals tell (`fixtures/effective_threshold`).
 
 pub mod form;
 mod intervals;
@@ -55,7 +60,9 @@ pub enum Unfit {
         limit: &'static str,
     },
     /// No rate above zero.
-    #[error("no rate above 0 Hz on any of {points} steps: without spikes there is no threshold; step to larger g_exc")]
+    #[error(
+        "no rate above 0 Hz on any of {points} steps: without spikes there is no threshold; step to larger g_exc"
+    )]
     Silent {
         /// Number of points.
         points: usize,
@@ -69,7 +76,9 @@ pub enum Unfit {
         parameters: usize,
     },
     /// Fewer distinct pairs of g_exc and g_inh than parameters, or fewer than four drives once collapsed.
-    #[error("{levels} distinct pairs of g_exc and g_inh are too few for {parameters} parameters: step to at least {parameters}, four of them apart in g_exc")]
+    #[error(
+        "{levels} distinct pairs of g_exc and g_inh are too few for {parameters} parameters: step to at least {parameters}, four of them apart in g_exc"
+    )]
     TooFewLevels {
         /// Distinct pairs.
         levels: usize,
@@ -77,7 +86,9 @@ pub enum Unfit {
         parameters: usize,
     },
     /// Only one inhibition level fires, or there is only one.
-    #[error("only {firing} of {levels} levels of g_inh has a rate above 0 Hz: what inhibition does needs at least 2")]
+    #[error(
+        "only {firing} of {levels} levels of g_inh has a rate above 0 Hz: what inhibition does needs at least 2"
+    )]
     OneInhibitionLevel {
         /// Levels with a rate above zero.
         firing: usize,
@@ -197,7 +208,11 @@ impl InhibitionFit {
 
 /// Fits all forms that the constants and the points allow; each of the others says why it is not. Profile intervals
 /// are computed with `profiles`. The order of `points` does not matter.
-pub fn fit_inhibition(points: &[InhibitionPoint], constants: &CellConstants, profiles: bool) -> InhibitionFit {
+pub fn fit_inhibition(
+    points: &[InhibitionPoint],
+    constants: &CellConstants,
+    profiles: bool,
+) -> InhibitionFit {
     let mut order: Vec<usize> = (0..points.len()).collect();
     // The rate and its error only make the sums independent of the order given.
     order.sort_by(|a, b| {
@@ -303,7 +318,10 @@ pub fn fit_inhibition(points: &[InhibitionPoint], constants: &CellConstants, pro
             search::search::<5>(law, &as_points, &joint, &starts).ok_or_else(|| too_few(Form::Divisive))
         }
     };
-    let base_law = relation.as_ref().ok().map(|found| (found.law, found.solution.parameters));
+    let base_law = relation
+        .as_ref()
+        .ok()
+        .map(|found| (found.law, found.solution.parameters));
     InhibitionFit {
         relation: relation.map(|mut found| {
             let (estimates, covariance) = finish(&as_points, &mut found, profiles);

@@ -152,7 +152,10 @@ fn bounds<const P: usize>(law: &Law, joint: &Joint, peak: f64) -> SolverOptions<
     let (least, most) = (inhibition(Some(0)), inhibition(joint.groups.len().checked_sub(1)));
     let [flattest, steepest] = GAIN_BOUNDS.map(|g| range / (g * peak));
     let noise = NOISE_BOUNDS.map(|n| (n * range).ln());
-    let threshold = [lowest - THRESHOLD_BELOW * range, highest + THRESHOLD_ABOVE * range];
+    let threshold = [
+        lowest - THRESHOLD_BELOW * range,
+        highest + THRESHOLD_ABOVE * range,
+    ];
     let (third, stride) = match law.membrane() {
         Some(m) => {
             // At or below E_inh inhibition would lower the threshold: not the relation any more.

@@ -25,13 +25,21 @@ pub(super) struct Collapsed {
 }
 
 /// Curves at all slopes worth a try. Empty where the points, collapsed, do not carry a curve.
-pub(super) fn collapsed(points: &[InhibitionPoint], joint: &Joint, membrane: Option<&Membrane>) -> Vec<Collapsed> {
+pub(super) fn collapsed(
+    points: &[InhibitionPoint],
+    joint: &Joint,
+    membrane: Option<&Membrane>,
+) -> Vec<Collapsed> {
     let mut slopes = vec![0.0];
-    slopes.extend(CROSSING.iter().filter_map(|part| shift_per_inhibition(joint, *part)));
+    slopes.extend(
+        CROSSING
+            .iter()
+            .filter_map(|part| shift_per_inhibition(joint, *part)),
+    );
     if let Some(m) = membrane {
-        slopes.extend(POTENTIALS.map(|part| {
-            m.per_inhibition_at(m.e_inh_mv() * (1.0 - part) + m.e_exc_mv() * part)
-        }));
+        slopes.extend(
+            POTENTIALS.map(|part| m.per_inhibition_at(m.e_inh_mv() * (1.0 - part) + m.e_exc_mv() * part)),
+        );
     }
     slopes
         .into_iter()

@@ -62,7 +62,10 @@ pub(crate) fn simulate(truth: Truth, scatter: f64, seed: u64, inhibition: &[f64]
 
 fn assert_near(what: &str, estimate: &Estimate, truth: f64, tolerance: f64) {
     let value = estimate.value.unwrap();
-    assert!((value - truth).abs() <= tolerance, "{what}: {value} against {truth}");
+    assert!(
+        (value - truth).abs() <= tolerance,
+        "{what}: {value} against {truth}"
+    );
 }
 
 use crate::fit::Estimate;
@@ -100,12 +103,7 @@ fn finds_the_parameters_that_made_exact_rates() {
                 assert_near("V_t", &e.v_threshold, truth.v_t, 1e-3);
             }
         }
-        assert_near(
-            "b",
-            &fit.divisive.as_ref().unwrap().estimates.divisive,
-            0.0,
-            1e-6,
-        );
+        assert_near("b", &fit.divisive.as_ref().unwrap().estimates.divisive, 0.0, 1e-6);
     }
 }
 
@@ -229,7 +227,10 @@ fn a_line_leaves_the_ceiling_open() {
     for form in Form::ALL {
         let e = &fit.of(form).as_ref().unwrap().estimates;
         assert!(e.ceiling_open && e.max_rate.value.is_none(), "{form:?}");
-        assert_eq!((e.max_rate.hi, e.half_rise.hi), (Some(f64::INFINITY), Some(f64::INFINITY)));
+        assert_eq!(
+            (e.max_rate.hi, e.half_rise.hi),
+            (Some(f64::INFINITY), Some(f64::INFINITY))
+        );
         assert!(e.max_rate.lo.unwrap() > 200.0 && e.initial_gain.value.is_some());
     }
     let v = fit.relation.unwrap().estimates.v_threshold;
@@ -250,12 +251,13 @@ fn questions_without_an_answer_are_answered_in_words() {
     let one = simulate(TRUTH, 1.0, 4, &[6.0]);
     assert_eq!(reason(&one, Form::Relation), None);
     for form in [Form::FreeSlope, Form::Divisive] {
-        assert!(reason(&one, form).unwrap().contains("only 1 of 1 levels of g_inh"));
+        assert!(
+            reason(&one, form)
+                .unwrap()
+                .contains("only 1 of 1 levels of g_inh")
+        );
     }
-    let silent: Vec<_> = good
-        .iter()
-        .map(|p| InhibitionPoint { rate: 0.0, ..*p })
-        .collect();
+    let silent: Vec<_> = good.iter().map(|p| InhibitionPoint { rate: 0.0, ..*p }).collect();
     let hushed: Vec<_> = good
         .iter()
         .map(|p| InhibitionPoint {
@@ -267,15 +269,27 @@ fn questions_without_an_answer_are_answered_in_words() {
     let few = [good[5], good[9], good[25], good[30]];
     let repeats: Vec<_> = std::iter::repeat_n(good[12], 9).chain([good[40]]).collect();
     for form in Form::ALL {
-        assert!(reason(&silent, form).unwrap().contains("no rate above 0 Hz on any of 64 steps"));
-        assert!(reason(&[], form).unwrap().contains("no rate above 0 Hz on any of 0"));
+        assert!(
+            reason(&silent, form)
+                .unwrap()
+                .contains("no rate above 0 Hz on any of 64 steps")
+        );
+        assert!(
+            reason(&[], form)
+                .unwrap()
+                .contains("no rate above 0 Hz on any of 0")
+        );
         assert!(reason(&few, form).unwrap().contains("4 steps are too few"));
         assert!(reason(&repeats, form).unwrap().contains("2 distinct pairs"));
     }
     for (i, bad) in [f64::NAN, f64::INFINITY, -1.0].into_iter().enumerate() {
         let mut points = good.clone();
         points[7].g_inh = bad;
-        assert!(reason(&points, Form::FreeSlope).unwrap().starts_with("point 8: g_inh = "));
+        assert!(
+            reason(&points, Form::FreeSlope)
+                .unwrap()
+                .starts_with("point 8: g_inh = ")
+        );
         let mut points = good.clone();
         points[7].rate = bad;
         assert!(reason(&points, Form::FreeSlope).unwrap().contains("0 Hz or more"));
