@@ -47,7 +47,7 @@ pub enum Unfit {
     /// The relation needs membrane constants, all in order.
     #[error("{0}")]
     Membrane(#[from] MembraneError),
-    /// A number that is not finite, a conductance of inhibition or a rate below zero, a standard error not above zero.
+    /// A number that is not finite, a conductance or a rate below zero, a standard error not above zero.
     #[error("point {}: {name} = {value} is not {limit}: leave the step out, or correct it", index + 1)]
     BadPoint {
         /// Index of the point as given.
@@ -414,7 +414,12 @@ fn form_fit<const P: usize>(
 fn check_points(points: &[InhibitionPoint]) -> Result<(), Unfit> {
     for (index, p) in points.iter().enumerate() {
         let checks = [
-            ("g_exc", p.g_exc, p.g_exc.is_finite(), "a finite number"),
+            (
+                "g_exc",
+                p.g_exc,
+                p.g_exc.is_finite() && p.g_exc >= 0.0,
+                "a finite number of 0 nS or more",
+            ),
             (
                 "g_inh",
                 p.g_inh,

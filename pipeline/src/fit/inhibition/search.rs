@@ -165,7 +165,11 @@ fn bounds<const P: usize>(law: &Law, joint: &Joint, peak: f64) -> SolverOptions<
             } else {
                 m.e_inh_mv()
             };
-            ([lower, m.steady_potential(threshold[1], least)], POTENTIAL_STRIDE)
+            // Half the way to E_exc at least: with E_leak below E_inh the former may lie below the lower bound.
+            let upper = m
+                .steady_potential(threshold[1], least)
+                .max(0.5 * (lower + m.e_exc_mv()));
+            ([lower, upper], POTENTIAL_STRIDE)
         }
         None => (threshold, 0.25 * range),
     };

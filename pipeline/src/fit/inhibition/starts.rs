@@ -52,6 +52,9 @@ pub(super) fn collapsed(
                     se: p.se,
                 })
                 .collect();
+            if !shifted.iter().all(|p| p.drive.is_finite()) {
+                return None;
+            }
             shifted.sort_by(|a, b| a.drive.total_cmp(&b.drive));
             let fit = main_fit::fit(&shifted, Scatter::Estimated)?;
             Some(Collapsed {

@@ -291,6 +291,13 @@ fn questions_without_an_answer_are_answered_in_words() {
                 .starts_with("point 8: g_inh = ")
         );
         let mut points = good.clone();
+        points[2].g_exc = bad;
+        assert!(
+            reason(&points, Form::FreeSlope)
+                .unwrap()
+                .starts_with("point 3: g_exc = ")
+        );
+        let mut points = good.clone();
         points[7].rate = bad;
         assert!(reason(&points, Form::FreeSlope).unwrap().contains("0 Hz or more"));
         let mut points = good.clone();
@@ -319,4 +326,66 @@ fn the_order_of_the_points_changes_nothing() {
     let first = relation.rates(points[0].g_inh, &[points[9].g_exc]);
     assert!((first[0].rate / relation.fitted[9] - 1.0).abs() < 1e-12);
     assert!(first[0].se.is_some_and(|se| se > 0.0 && se < 2.0));
+}
+
+#[test]
+fn no_input_panics_or_gives_what_is_not_a_number() {
+    use rand::RngExt;
+    let mut rng = ChaCha8Rng::seed_from_u64(11);
+    let odd = [0.0, 1e-300, 1e-9, 1e-3, 1.0, 1e3, 1e9, 1e300];
+    let mut fitted = 0;
+    for case in 0..250 {
+        // From tame to absurd.
+        let absurd = f64::from(case % 5) * 0.05;
+        let mut pick = |low: f64, high: f64| -> f64 {
+            if rng.random::<f64>() < absurd {
+                odd[(rng.random::<f64>() * 8.0) as usize] * if rng.random::<f64>() < 0.2 { -1.0 } else { 1.0 }
+            } else {
+                low + (high - low) * rng.random::<f64>()
+            }
+        };
+        let constants = CellConstants {
+            g_leak_ns: Some(pick(0.5, 30.0)),
+            e_leak_mv: Some(pick(-95.0, -40.0)),
+            e_exc_mv: Some(pick(-30.0, 20.0)),
+            e_inh_mv: Some(pick(-95.0, -40.0)),
+            ..CellConstants::default()
+        };
+        let count = pick(0.0, 30.0).clamp(0.0, 40.0) as usize;
+        let points: Vec<InhibitionPoint> = (0..count)
+            .map(|_| InhibitionPoint {
+                g_exc: pick(0.0, 12.0).floor().max(0.0),
+                g_inh: pick(0.0, 3.0).floor().max(0.0),
+                rate: pick(-20.0, 80.0).max(0.0),
+                se: pick(0.1, 3.0).abs().max(1e-300),
+            })
+            .collect();
+        let fit = fit_inhibition(&points, &constants, case % 3 == 0);
+        for form in Form::ALL {
+            let Ok(found) = fit.of(form) else { continue };
+            if !found.converged {
+                continue;
+            }
+            fitted += 1;
+            let e = &found.estimates;
+            for estimate in [
+                e.max_rate,
+                e.half_rise,
+                e.threshold,
+                e.noise_sd,
+                e.initial_gain,
+                e.v_threshold,
+                e.slope,
+                e.divisive,
+            ] {
+                let all = [estimate.value, estimate.se, estimate.lo, estimate.hi];
+                assert!(all.iter().flatten().all(|x| !x.is_nan()), "{case} {form:?} {e:?}");
+                let [lo, hi] = [estimate.lo, estimate.hi];
+                if let (Some(lo), Some(value), Some(hi)) = (lo, estimate.value, hi) {
+                    assert!(lo <= value && value <= hi, "{case} {form:?} {e:?}");
+                }
+            }
+        }
+    }
+    assert!(fitted > 100, "{fitted}");
 }
