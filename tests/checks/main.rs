@@ -5,6 +5,7 @@
 #![allow(clippy::neg_cmp_op_on_partial_ord)]
 
 mod bootstrap;
+mod effective_threshold;
 mod extra_variance;
 mod goodness;
 mod hyperbola;

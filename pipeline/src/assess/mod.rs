@@ -3,6 +3,7 @@
 pub mod flags;
 pub mod goodness;
 pub mod repeats;
+pub mod inhibition;
 pub mod verdict;
 
 use std::sync::Arc;

@@ -205,6 +205,10 @@ impl<const P: usize, L: LeastSquares<P>> SideSearch<'_, P, L> {
             let excess = model.cost - model.gain - target;
             let root = model.gradient * model.gradient - model.curvature * excess;
             let mut step = (model.gradient + direction * root.max(0.0).sqrt()) / model.curvature;
+            // Numbers near the largest there is: sums have overflowed.
+            if !step.is_finite() {
+                return None;
+            }
             if iteration == 0 {
                 reach = REACH * step.abs();
             }
