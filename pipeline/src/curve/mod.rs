@@ -1,7 +1,9 @@
 //! Rate functions: one a file, with value, gradient, limits and citation.
 
+pub mod adapting;
 pub mod hyperbola;
 pub mod quadrature;
+pub mod rate_function;
 pub mod smoothed_hyperbola;
 pub mod smoothed_ramp;
 mod vector_exp;
