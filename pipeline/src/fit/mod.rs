@@ -1,5 +1,7 @@
 //! From rates to a rate function: objective, solver, extra SD, profiles.
 
+pub mod adaptation;
+pub mod decay;
 mod estimates;
 mod extra_sd;
 pub mod hyperbola_fit;
