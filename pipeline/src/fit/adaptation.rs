@@ -213,6 +213,14 @@ impl LeastSquares<PARAMETERS> for Problem<'_> {
 /// Fewer than 4 rates above zero of either response, fewer than 4 levels, a number that is not finite or a standard error
 /// that is not positive, or no convergence: why, in words.
 pub fn fit_adaptation(points: &[AdaptationPoint]) -> Result<AdaptationFit, NoAdaptation> {
+    fit_near(points, None)
+}
+
+/// [`fit_adaptation`] from a minimum of nearly the same points, if there is one, in place of the search for starts.
+pub(super) fn fit_near(
+    points: &[AdaptationPoint],
+    near: Option<&AdaptationFit>,
+) -> Result<AdaptationFit, NoAdaptation> {
     const NEEDED: usize = 4;
     let usable = |p: &AdaptationPoint| {
         let Point { drive, rate, se } = p.point;
@@ -278,27 +286,13 @@ pub fn fit_adaptation(points: &[AdaptationPoint]) -> Result<AdaptationFit, NoAda
         variance: (0.05 * peak).powi(2),
         evaluations: 0,
     };
-    let rough = SolverOptions {
-        decrease_tolerance: 1e-3,
-        max_iterations: 15,
-        ..search.options
-    };
-    let mut curves: Vec<[f64; 4]> = starts(&Levels::new(&onset, search.variance))
-        .into_iter()
-        .take(CURVES - 1)
-        .collect();
-    curves.extend(main_fit::fit(&onset, Scatter::Estimated).map(|fit| fit.solution.parameters));
-    let mut candidates: Vec<Solution<PARAMETERS>> = Vec::new();
-    for curve in curves {
-        for strength in STRENGTHS {
-            let start = [curve[0], curve[1], curve[2], curve[3], strength * curve[0]];
-            candidates.push(search.minimise(start, &rough));
+    let (mut best, mut rivals) = match near {
+        Some(near) => {
+            search.variance = near.extra_variance;
+            (near.solution, Vec::new())
         }
-    }
-    candidates.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
-    let mut best = *candidates.first().ok_or(NoAdaptation::NotConverged)?;
-    let mut rivals: Vec<[f64; PARAMETERS]> =
-        candidates.iter().skip(1).take(3).map(|c| c.parameters).collect();
+        None => search.starts(&onset)?,
+    };
     for _ in 0..RESTARTS {
         let mut converged = search.settle(&mut best);
         // The weights have changed: another start may lie lower now, or the ramp.
@@ -374,6 +368,35 @@ impl Search<'_> {
         let found = minimise(&self.problem(), start, options);
         self.evaluations += found.evaluations;
         found
+    }
+
+    /// The best of a grid of curves and strengths after a short search, and the next three.
+    fn starts(
+        &mut self,
+        onset: &[Point],
+    ) -> Result<(Solution<PARAMETERS>, Vec<[f64; PARAMETERS]>), NoAdaptation> {
+        let rough = SolverOptions {
+            decrease_tolerance: 1e-3,
+            max_iterations: 15,
+            ..self.options
+        };
+        let mut curves: Vec<[f64; 4]> = starts(&Levels::new(onset, self.variance))
+            .into_iter()
+            .take(CURVES - 1)
+            .collect();
+        curves.extend(main_fit::fit(onset, Scatter::Estimated).map(|fit| fit.solution.parameters));
+        let mut candidates: Vec<Solution<PARAMETERS>> = Vec::new();
+        for curve in curves {
+            for strength in STRENGTHS {
+                let start = [curve[0], curve[1], curve[2], curve[3], strength * curve[0]];
+                candidates.push(self.minimise(start, &rough));
+            }
+        }
+        candidates.sort_by(|a, b| a.cost().total_cmp(&b.cost()));
+        let best = *candidates.first().ok_or(NoAdaptation::NotConverged)?;
+        let rivals: Vec<[f64; PARAMETERS]> =
+            candidates.iter().skip(1).take(3).map(|c| c.parameters).collect();
+        Ok((best, rivals))
     }
 
     fn fitted(&self, parameters: &[f64; PARAMETERS]) -> Vec<f64> {

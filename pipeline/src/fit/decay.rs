@@ -273,6 +273,176 @@ fn integrals<'a>(spikes: &'a [f64], at: &Solution<3>) -> impl Iterator<Item = f6
         .map(move |w| settled * (w[1] - w[0]) + (on - settled) * integral(w[0], w[1], tau).0)
 }
 
+/// Exponentials of many steps whose time constants are known multiples of one: tau_s = factor_s tau.
+#[derive(Clone, Debug, Default)]
+pub struct CommonDecay<'a> {
+    steps: Vec<(&'a [f64], f64)>,
+    intervals: usize,
+    shortest: f64,
+    longest: f64,
+}
+
+impl<'a> CommonDecay<'a> {
+    /// Adds the spikes of a step, seconds from its onset, and its factor. A step of fewer than [`INTERVALS_NEEDED`]
+    /// intervals, of times that do not ascend from the onset, or with a factor that is not positive, is passed over.
+    pub fn add(&mut self, spikes: &'a [f64], factor: f64) {
+        let n = spikes.len().saturating_sub(1);
+        let good = n >= INTERVALS_NEEDED
+            && factor > 0.0
+            && spikes[0] >= 0.0
+            && spikes[n].is_finite()
+            && spikes.windows(2).all(|w| w[1] > w[0]);
+        if !good {
+            return;
+        }
+        let shortest = spikes
+            .windows(2)
+            .map(|w| w[1] - w[0])
+            .fold(f64::INFINITY, f64::min);
+        let first = self.steps.is_empty();
+        self.shortest = if first {
+            shortest
+        } else {
+            shortest.min(self.shortest)
+        };
+        self.longest = self.longest.max(spikes[n] / factor);
+        self.intervals += n;
+        self.steps.push((spikes, factor));
+    }
+
+    /// Steps taken in.
+    pub fn steps(&self) -> usize {
+        self.steps.len()
+    }
+
+    /// Shortest and longest tau of the search, seconds.
+    pub fn range(&self) -> (f64, f64) {
+        (BOUNDS[0] * self.shortest, BOUNDS[1] * self.longest)
+    }
+
+    /// Deviance and Pearson's sum at one ln tau, onset and settled rate of every step at their best.
+    fn sums(&self, ln_tau: f64) -> [f64; 2] {
+        let mut sums = [0.0; 2];
+        for (spikes, factor) in &self.steps {
+            let n = spikes.len() - 1;
+            let ln_mean = (n as f64 / (spikes[n] - spikes[0])).ln();
+            let options = SolverOptions {
+                lower: [ln_mean - WIDEST.ln(), ln_mean - WIDEST.ln(), f64::NEG_INFINITY],
+                upper: [ln_mean + WIDEST.ln(), ln_mean + WIDEST.ln(), f64::INFINITY],
+                fixed: [false, false, true],
+                decrease_tolerance: 1e-9,
+                step_tolerance: 1e-9,
+                max_iterations: 60,
+                ..SolverOptions::default()
+            };
+            let found = minimise(
+                &Problem { spikes },
+                [ln_mean + 0.1, ln_mean, ln_tau + factor.ln()],
+                &options,
+            );
+            sums[0] += found.cost();
+            sums[1] += integrals(spikes, &found)
+                .map(|u| (u - 1.0) * (u - 1.0))
+                .sum::<f64>();
+        }
+        sums
+    }
+
+    /// The common tau in seconds with its profile interval, an end 0 or infinite where the profile does not close.
+    /// `None` without steps, or where the best tau is a bound of the search.
+    pub fn estimate(&self) -> Option<Estimate> {
+        let degrees = self.intervals as f64 - 2.0 * self.steps.len() as f64 - 1.0;
+        if self.steps.is_empty() || !(degrees > 0.0) {
+            return None;
+        }
+        let (low, high) = (self.range().0.ln(), self.range().1.ln());
+        let search = LineSearch {
+            cost: |ln_tau: f64| self.sums(ln_tau)[0],
+            low,
+            high,
+        };
+        let best = search.minimum(None, 1e-4)?;
+        let [deviance, pearson] = self.sums(best);
+        let t = t_quantile(degrees);
+        let target = deviance + t * t * (pearson / degrees).max(LEAST_DISPERSION);
+        let [lo, hi] = [low, high].map(|bound| search.end(best, target, bound));
+        let tau = best.exp();
+        Some(Estimate {
+            value: Some(tau),
+            se: lo.zip(hi).map(|(lo, hi)| tau * 0.5 * (hi - lo) / t),
+            lo: Some(lo.map_or(0.0, f64::exp)),
+            hi: Some(hi.map_or(f64::INFINITY, f64::exp)),
+        })
+    }
+}
+
+/// A cost along one line.
+pub(super) struct LineSearch<F> {
+    pub(super) cost: F,
+    pub(super) low: f64,
+    pub(super) high: f64,
+}
+
+impl<F: Fn(f64) -> f64> LineSearch<F> {
+    /// The place of the least cost: the best of a grid, or `near`, then golden section around it. `None` at either end.
+    pub(super) fn minimum(&self, near: Option<f64>, tolerance: f64) -> Option<f64> {
+        const GRID: usize = 20;
+        let width = (self.high - self.low) / GRID as f64;
+        let centre = near.or_else(|| {
+            (0..=GRID)
+                .map(|i| self.low + width * i as f64)
+                .map(|x| ((self.cost)(x), x))
+                .min_by(|a, b| a.0.total_cmp(&b.0))
+                .map(|(_, x)| x)
+        })?;
+        let (mut low, mut high) = ((centre - width).max(self.low), (centre + width).min(self.high));
+        let golden = 0.5 * (5.0_f64.sqrt() - 1.0);
+        let (mut a, mut b) = (high - golden * (high - low), low + golden * (high - low));
+        let (mut at_a, mut at_b) = ((self.cost)(a), (self.cost)(b));
+        while high - low > tolerance {
+            if at_a < at_b {
+                (high, b, at_b) = (b, a, at_a);
+                a = high - golden * (high - low);
+                at_a = (self.cost)(a);
+            } else {
+                (low, a, at_a) = (a, b, at_b);
+                b = low + golden * (high - low);
+                at_b = (self.cost)(b);
+            }
+        }
+        let best = 0.5 * (low + high);
+        (best > self.low + 2.0 * tolerance && best < self.high - 2.0 * tolerance).then_some(best)
+    }
+
+    /// Where the cost reaches `target` on the way from `best` to `bound`; `None` where it stays below.
+    pub(super) fn end(&self, best: f64, target: f64, bound: f64) -> Option<f64> {
+        let (mut inside, mut step) = (best, 0.05 * (bound - best).signum());
+        let mut outside = loop {
+            let next = inside + step;
+            if (next - bound) * step >= 0.0 {
+                if (self.cost)(bound) < target {
+                    return None;
+                }
+                break bound;
+            }
+            if (self.cost)(next) >= target {
+                break next;
+            }
+            inside = next;
+            step *= 2.0;
+        };
+        while (outside - inside).abs() > 1e-4 {
+            let middle = 0.5 * (inside + outside);
+            if (self.cost)(middle) < target {
+                inside = middle;
+            } else {
+                outside = middle;
+            }
+        }
+        Some(0.5 * (inside + outside))
+    }
+}
+
 /// 95 % quantile of F with 2 and `degrees` degrees of freedom, in closed form: P(F > x) = (1 + 2x/m)^(-m/2).
 fn f_quantile_2(degrees: f64) -> f64 {
     0.5 * degrees * (0.05_f64.powf(-2.0 / degrees) - 1.0)

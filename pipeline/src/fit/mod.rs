@@ -1,6 +1,7 @@
 //! From rates to a rate function: objective, solver, extra SD, profiles.
 
 pub mod adaptation;
+pub mod adaptation_time;
 pub mod decay;
 mod estimates;
 mod extra_sd;
