@@ -140,6 +140,11 @@ impl Adapting {
         self.tau_rate_s
     }
 
+    /// Longest step of the integration, seconds.
+    pub fn step_s(&self) -> f64 {
+        self.step_s
+    }
+
     /// The state at rest under a constant `drive`, with a count of 0.
     pub fn at_rest(&self, drive: f64) -> State {
         let rate = steady(&self.curve, self.alpha, drive).rate;

@@ -193,8 +193,9 @@ pub fn cell_adaptation(trains: &[Train<'_>], settings: &Analysis) -> CellAdaptat
         };
         cell.tau_a_s = timed.estimate(&fit, last.map(|l| l[1]));
         let tau = cell.tau_a_s.ok().and_then(|e| e.value);
+        let model = timed.model(&fit, tau);
         for (m, fitted) in measured.iter_mut().zip(&fit.fitted) {
-            m.update(*fitted, dispersion, &fit, tau);
+            m.update(*fitted, dispersion, model.as_ref());
         }
         let now = [fit.strength(), tau.unwrap_or(0.0)];
         cell.fit = Ok(fit);
@@ -209,7 +210,7 @@ pub fn cell_adaptation(trains: &[Train<'_>], settings: &Analysis) -> CellAdaptat
         }
     }
     if let (Ok(fit), Ok(tau)) = (&mut cell.fit, &cell.tau_a_s) {
-        widen_alpha(fit, &measured, dispersion, tau);
+        widen_alpha(fit, &measured, dispersion, &timed, tau);
     }
     if let Ok(fit) = &cell.fit {
         let tau = cell.tau_a_s.ok().and_then(|e| e.value);
@@ -234,17 +235,24 @@ pub fn cell_adaptation(trains: &[Train<'_>], settings: &Analysis) -> CellAdaptat
 
 /// Adds to alpha's standard error and interval what tau_a leaves open through the windows' remaining parts: the fit is
 /// repeated with tau_a one standard error shorter and longer.
-fn widen_alpha(fit: &mut AdaptationFit, measured: &[Measured], dispersion: f64, tau: &Estimate) {
+fn widen_alpha(
+    fit: &mut AdaptationFit,
+    measured: &[Measured],
+    dispersion: f64,
+    timed: &Timed<'_>,
+    tau: &Estimate,
+) {
     let (Some(value), Some(se)) = (tau.value, tau.se) else {
         return;
     };
     let at = |sign: f64| {
+        let model = timed.model(fit, Some(value * (sign * se / value).exp()));
         let points: Vec<AdaptationPoint> = measured
             .iter()
             .zip(&fit.fitted)
             .map(|(m, fitted)| {
                 let mut m = *m;
-                m.update(*fitted, dispersion, fit, Some(value * (sign * se / value).exp()));
+                m.update(*fitted, dispersion, model.as_ref());
                 m.point
             })
             .collect();
@@ -359,24 +367,21 @@ impl Measured {
 
     /// Standard error from the fitted rather than the measured rate, which would give the low ones too much weight; what
     /// the window sees from the full equations.
-    fn update(&mut self, fitted: f64, dispersion: f64, fit: &AdaptationFit, tau: Option<f64>) {
+    fn update(&mut self, fitted: f64, dispersion: f64, model: Option<&Adapting>) {
         if self.intervals > 0 {
             let noise = fitted * (dispersion / self.intervals as f64).sqrt();
             self.point.point.se = noise.hypot(self.floor);
         }
-        let (Some(curve), Some(tau)) = (fit.curve(), tau) else {
+        let Some(cell) = model else {
             return;
         };
         let drive = self.point.point.drive;
-        let f0 = curve.at(drive).rate;
-        let settled = steady(&curve, fit.strength(), drive).rate;
+        let f0 = cell.curve.at(drive).rate;
+        let settled = steady(&cell.curve, cell.alpha(), drive).rate;
         if !(f0 - settled > 1e-6 * f0) {
             return;
         }
         let [from, to] = self.window;
-        let Some(cell) = Adapting::new(curve, fit.strength(), tau, 0.0) else {
-            return;
-        };
         let mut state = State::default();
         cell.advance(&mut state, drive, drive, from);
         let before = state.count;
@@ -454,6 +459,11 @@ impl<'a> Timed<'a> {
         let [low, high] = self.drives;
         let deepest = parameters[4] * curve.at(high).rate;
         Some(curve.tabulated(low - deepest, high))
+    }
+
+    /// The cell as fitted, if it has a time constant.
+    fn model(&self, fit: &AdaptationFit, tau: Option<f64>) -> Option<Adapting> {
+        Adapting::new(self.curve(&fit.solution.parameters)?, fit.strength(), tau?, 0.0)
     }
 
     fn estimate(&self, fit: &AdaptationFit, near: Option<f64>) -> Result<Estimate, NoTimeConstant> {

@@ -9,6 +9,7 @@ pub mod hyperbola_fit;
 pub mod main_fit;
 pub mod objective;
 mod profile;
+pub mod relaxation;
 pub mod solver;
 mod starts;
 
