@@ -4,6 +4,7 @@
 // `!(error <= limit)` is meant: it also catches what is not a number.
 #![allow(clippy::neg_cmp_op_on_partial_ord)]
 
+mod adaptation;
 mod extra_variance;
 mod hyperbola;
 mod integrate_and_fire;

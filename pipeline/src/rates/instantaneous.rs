@@ -80,14 +80,27 @@ mod tests {
                     spikes: 5..7,
                 },
             ],
-            steps: vec![step(0, "1", 0.0, 1.0), step(0, "2", 1.0, 2.0), step(1, "1", 0.0, 1.0)],
+            steps: vec![
+                step(0, "1", 0.0, 1.0),
+                step(0, "2", 1.0, 2.0),
+                step(1, "1", 0.0, 1.0),
+            ],
             spikes_s: vec![0.25, 0.5, 0.75, 1.25, 1.75, 0.5, 0.5],
             refusal: None,
         };
         let rows = interval_rates(&cell, &meet(&cell));
         let short: Vec<_> = rows
             .iter()
-            .map(|r| (r.sweep.as_deref(), &*r.step, r.interval, r.start_s, r.end_s, r.rate_hz))
+            .map(|r| {
+                (
+                    r.sweep.as_deref(),
+                    &*r.step,
+                    r.interval,
+                    r.start_s,
+                    r.end_s,
+                    r.rate_hz,
+                )
+            })
             .collect();
         assert_eq!(
             short,
