@@ -154,7 +154,7 @@ fn kolmogorov_smirnov_agrees_with_scipy() {
         let kind = usize::from(n > 140) + usize::from(n > 200);
         worst[kind] = worst[kind].max(error);
     }
-    println!("largest differences, to 140, to 200, above: {worst:.1e?}");
+    println!("largest differences, to 140, to 200, above: {worst:?}");
     assert!(
         table.len() > 100 && worst[0] < 1e-12 && worst[1] < 3e-6 && worst[2] < 1e-4,
         "{worst:?}"

@@ -46,14 +46,15 @@ pub fn steady(curve: &RateFunction, alpha: f64, drive: f64) -> Steady {
                 low = rate;
             }
             let newton = rate - miss / (1.0 + alpha * at.slope);
-            let next = if newton > low && newton < high {
+            // Newton doubles its digits: the step after one this short is lost in rounding.
+            let done = (newton - rate).abs() <= 1e-9 * high;
+            let next = if done || (newton > low && newton < high) {
                 newton
             } else {
                 0.5 * (low + high)
             };
-            let done = (next - rate).abs() <= 1e-15 * high;
-            rate = next;
-            if done {
+            rate = next.max(0.0);
+            if done || high - low <= 1e-15 * high {
                 break;
             }
         }

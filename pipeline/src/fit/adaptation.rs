@@ -38,6 +38,8 @@ const STRONGEST: f64 = 100.0;
 /// Rounds of weights and curve, and of starting again from a better minimum.
 const ROUNDS: usize = 200;
 const RESTARTS: usize = 4;
+/// Squared residual, in units of the standard error, below which a point lies on the curve to rounding.
+const EXACT: f64 = 1e-14;
 /// The extra variance has settled once it moves by less than this fraction of the total variance.
 const SETTLED: f64 = 1e-7;
 
@@ -301,7 +303,7 @@ pub(super) fn fit_near(
         for start in rivals.iter().chain([&ramp]) {
             let options = search.options;
             let other = search.minimise(*start, &options);
-            if other.converged && other.cost() < best.cost() * (1.0 - 1e-7) {
+            if other.converged && other.cost() < best.cost() * (1.0 - 1e-7) - 1e-12 {
                 best = other;
                 converged = search.settle(&mut best);
             }
@@ -429,7 +431,8 @@ impl Search<'_> {
             let target = extra_variance(&residuals, &errors, self.degrees());
             let change = target - self.variance;
             if change.abs() <= SETTLED * (target + interval_variance) {
-                return best.converged;
+                // Points that lie on the curve to rounding leave the solver nothing to go by.
+                return best.converged || best.cost() < EXACT * self.points.len() as f64;
             }
             // Changes shrink by a steady factor: the sum of those to come at once (Aitken).
             let ratio = if round > 1 {
@@ -526,7 +529,7 @@ impl Search<'_> {
             extra_variance: self.variance,
             degrees: self.degrees(),
             fitted: self.fitted(&best.parameters),
-            converged: best.converged,
+            converged: true,
             evaluations: self.evaluations,
         })
     }
