@@ -1,6 +1,6 @@
 //! A rate function with its numbers put in, for running rather than fitting: rate and slope at any drive.
 
-use super::smoothed_hyperbola::Kernel;
+use super::smoothed_hyperbola::{Kernel, Pass, Slope, vectorised};
 use super::smoothed_ramp::ramp;
 
 /// Nodes of a table for each noise SD: the interpolation error is then below 2e-5 of initial gain times noise SD.
@@ -125,7 +125,10 @@ impl RateFunction {
                 per_half_rise,
                 kernel,
             } => {
-                let f = kernel.at(x * per_half_rise);
+                let f = vectorised(One {
+                    kernel,
+                    z: x * per_half_rise,
+                });
                 RateAt {
                     rate: max_rate * f.h,
                     slope: self.gain * f.dh_dz,
@@ -147,6 +150,21 @@ impl RateFunction {
                 }
             }
         }
+    }
+}
+
+/// One evaluation, compiled for the machine's vectors.
+struct One {
+    kernel: Kernel,
+    z: f64,
+}
+
+impl Pass for One {
+    type Output = Slope;
+
+    #[inline(always)]
+    fn run(self) -> Slope {
+        self.kernel.at(self.z)
     }
 }
 
