@@ -73,6 +73,9 @@ const STEPS_PER_DECAY: f64 = 8.0;
 /// settles faster than anything measured; there the integration keeps the longer step.
 const FASTEST: f64 = 512.0;
 
+/// Change of A in a step, as a fraction of A, below which it has settled.
+const AT_REST: f64 = 1e-10;
+
 /// An adapting cell.
 #[derive(Clone, Debug)]
 pub struct Adapting {
@@ -173,7 +176,14 @@ impl Adapting {
             if self.tau_rate_s > 0.0 {
                 self.coupled_step(state, drives, h);
             } else {
+                let before = state.adaptation;
                 self.instant_step(state, drives, h);
+                // At rest nothing moves any more: the rest of a long step is a straight line.
+                if per_step == 0.0 && (state.adaptation - before).abs() <= AT_REST * before.abs() {
+                    let rate = self.curve.at(to - state.adaptation).rate;
+                    state.count += rate * (duration - h * (i + 1) as f64);
+                    break;
+                }
             }
         }
         if self.tau_rate_s == 0.0 {
@@ -271,6 +281,21 @@ mod tests {
                 assert!((a.count - b.count).abs() < 1e-5);
             }
         }
+    }
+
+    #[test]
+    fn a_long_step_ends_in_a_straight_line() {
+        let curve = RateFunction::from_reported(100.0, 200.0, 50.0, 20.0).unwrap();
+        let cell = Adapting::new(curve, 2.0, 0.1, 0.0).unwrap();
+        let (mut long, mut pieces) = (State::default(), State::default());
+        cell.advance(&mut long, 400.0, 400.0, 1e5);
+        for _ in 0..50 {
+            cell.advance(&mut pieces, 400.0, 400.0, 0.1);
+        }
+        let rest = cell.at_rest(400.0);
+        assert!((long.rate - rest.rate).abs() < 1e-7 && (pieces.rate - rest.rate).abs() < 1e-7);
+        let expected = pieces.count + rest.rate * (1e5 - 5.0);
+        assert!((long.count / expected - 1.0).abs() < 1e-8);
     }
 
     #[test]

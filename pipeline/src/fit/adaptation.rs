@@ -83,8 +83,10 @@ pub enum NoAdaptation {
         /// Limit.
         needed: usize,
     },
-    /// A number that is not finite, or a standard error that is not positive.
-    #[error("a drive, rate or standard error is not a number that can be used")]
+    /// A number that is not finite, a standard error that is not positive, or spikes out of order or outside their step.
+    #[error(
+        "a drive, time, rate or standard error is not a number that can be used, or spikes are not in order"
+    )]
     BadNumber,
     /// The first interval's rate has no finite mean for firing this irregular.
     #[error("interval CV {cv:.2} is above {limit}: one interval tells too little of the onset rate")]

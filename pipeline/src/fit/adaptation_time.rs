@@ -45,6 +45,19 @@ pub struct Train<'a> {
     pub spikes_s: &'a [f64],
 }
 
+impl Train<'_> {
+    /// Finite numbers, an offset after the onset, and ascending spikes between the two.
+    fn usable(&self) -> bool {
+        let inside = |t: &f64| *t >= self.onset_s && *t <= self.offset_s;
+        self.drive.is_finite()
+            && self.onset_s.is_finite()
+            && self.offset_s.is_finite()
+            && self.offset_s > self.onset_s
+            && self.spikes_s.iter().all(inside)
+            && self.spikes_s.windows(2).all(|w| w[1] > w[0])
+    }
+}
+
 /// Why tau_a could not be estimated.
 #[derive(Clone, Copy, Debug, PartialEq, thiserror::Error)]
 pub enum NoTimeConstant {
@@ -155,6 +168,11 @@ pub fn cell_adaptation(trains: &[Train<'_>], settings: &Analysis) -> CellAdaptat
         rounds: 0,
         settled: false,
     };
+    if !trains.iter().all(Train::usable) {
+        cell.fit = Err(NoAdaptation::BadNumber);
+        cell.steps = steps;
+        return cell;
+    }
     if dispersion > LARGEST_DISPERSION {
         cell.steps = steps;
         return cell;
@@ -731,6 +749,42 @@ mod tests {
         let nothing = cell_adaptation(&[], &Analysis::default());
         assert!(nothing.fit.is_err());
         assert!(matches!(nothing.tau_a_s, Err(NoTimeConstant::NoFit)));
+    }
+
+    #[test]
+    fn nothing_in_the_input_makes_it_panic() {
+        let good: Vec<f64> = (1..30).map(|i| 0.03 * f64::from(i)).collect();
+        let mut backwards = good.clone();
+        backwards.reverse();
+        let cases: [(f64, f64, Vec<f64>); 8] = [
+            (f64::NAN, 1.0, good.clone()),
+            (f64::INFINITY, 1.0, good.clone()),
+            (100.0, f64::INFINITY, good.clone()),
+            (100.0, -1.0, good.clone()),
+            (100.0, 1.0, backwards),
+            (100.0, 1.0, vec![f64::NAN; 9]),
+            (100.0, 1.0, vec![0.5; 9]),
+            (100.0, 1.0, [&good[..], &[f64::INFINITY]].concat()),
+        ];
+        for (drive, offset_s, spikes) in &cases {
+            let mut trains: Vec<Train> = (0..12)
+                .map(|i| Train {
+                    drive: 40.0 * f64::from(i),
+                    onset_s: 0.0,
+                    offset_s: 1.0,
+                    spikes_s: if i > 2 { &good } else { &[] },
+                })
+                .collect();
+            trains[7] = Train {
+                drive: *drive,
+                onset_s: 0.0,
+                offset_s: *offset_s,
+                spikes_s: spikes,
+            };
+            let found = cell_adaptation(&trains, &Analysis::default());
+            assert_eq!(found.steps.len(), 12);
+            assert_eq!(found.fit.unwrap_err(), NoAdaptation::BadNumber);
+        }
     }
 
     #[test]

@@ -387,6 +387,9 @@ impl<F: Fn(f64) -> f64> LineSearch<F> {
     /// The place of the least cost: the best of a grid, or `near`, then golden section around it. `None` at either end.
     pub(super) fn minimum(&self, near: Option<f64>, tolerance: f64) -> Option<f64> {
         const GRID: usize = 20;
+        if !(self.low < self.high && self.low.is_finite() && self.high.is_finite()) {
+            return None;
+        }
         let width = (self.high - self.low) / GRID as f64;
         let centre = near.or_else(|| {
             (0..=GRID)

@@ -18,6 +18,8 @@ use crate::curve::rate_function::RateFunction;
 
 /// Halvings of a ramp beyond which the curve counts as a step.
 const DEEPEST: u32 = 30;
+/// Smallest tolerance, Hz: the number of stretches grows as its inverse root.
+const LEAST_TOLERANCE: f64 = 1e-8;
 /// Steps of the integration that a run may take.
 const MOST_STEPS: f64 = 2e8;
 
@@ -49,8 +51,8 @@ pub enum RunError {
         /// Time constant of the rate, seconds.
         tau_rate_s: f64,
     },
-    /// The tolerance is not positive.
-    #[error("tolerance {tolerance_hz} Hz: must be above 0")]
+    /// The tolerance is not positive, or below what rounding allows.
+    #[error("tolerance {tolerance_hz} Hz: must be {LEAST_TOLERANCE} Hz or more")]
     BadTolerance {
         /// The tolerance, Hz.
         tolerance_hz: f64,
@@ -139,7 +141,7 @@ pub fn predict(
         }
         return Ok(with_adaptation(&cell, drive, start_s, times_s));
     }
-    if !(tolerance_hz > 0.0) {
+    if !(tolerance_hz >= LEAST_TOLERANCE) {
         return Err(RunError::BadTolerance { tolerance_hz });
     }
     let mut relaxing = Relaxing {
@@ -293,7 +295,7 @@ mod tests {
             };
             assert!((r - exact).abs() < 1e-9, "{t}: {r} {exact}");
         }
-        // Dossier: F 20, r0 60 Hz, tau 50 ms, 0.5 s: 11.99990920 spikes. Here: integral = F T - tau (r - r0).
+        // Integral = F T - tau (r - r0).
         let expected = high * 0.5 - 0.02 * (high - low) * (1.0 - (-25.0_f64).exp());
         assert!((found.counts[60] - found.counts[10] - expected).abs() < 1e-9);
         assert_eq!(found.error_hz, Some(0.0));
