@@ -69,20 +69,16 @@ fn rates_over_a_protocol_agree() {
     .unwrap();
     let mut worst = [0.0_f64; 2];
     for cell in cells() {
-        for course in cell["courses"].as_array().unwrap() {
+        for run in cell["runs"].as_array().unwrap() {
             let model = RateModel {
                 curve: curve(&cell),
                 alpha: number(&cell, "alpha"),
                 tau_a_s: number(&cell, "tau_a"),
-                tau_rate_s: number(course, "tau_rate"),
+                tau_rate_s: number(run, "tau_rate"),
             };
-            let times = list(course, "times");
+            let times = list(run, "times");
             let found = predict(&model, &drive, 0.0, &times, 0.01).unwrap();
-            for (i, (rate, count)) in list(course, "rates")
-                .iter()
-                .zip(list(course, "counts"))
-                .enumerate()
-            {
+            for (i, (rate, count)) in list(run, "rates").iter().zip(list(run, "counts")).enumerate() {
                 worst[0] = worst[0].max((found.rates_hz[i] - rate).abs());
                 worst[1] = worst[1].max((found.counts[i] - count).abs());
             }

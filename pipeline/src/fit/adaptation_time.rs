@@ -7,7 +7,7 @@
 //! steady state; where f0' changes on the way there, the decay is no exponential and the relation is off. The full
 //! equations of [`crate::curve::adapting`] have no such limit: with curve and alpha as fitted, tau_a is where the integral
 //! of their rate over every interval comes closest to 1 (deviance of [`super::decay`]), each step's rate scaled freely so
-//! that only the time course counts. Rate, alpha and the two over-determine the model: where the estimates of tau_a
+//! that only the change over time counts. Rate, alpha and the two over-determine the model: where the estimates of tau_a
 //! disagree, it does not describe the cell.
 //!
 //! A cell is taken to be rested, A = 0, at the onset of every step: steps have to be further apart than a few tau_a.
@@ -68,7 +68,7 @@ pub enum NoTimeConstant {
     #[error("no joint fit of onset and steady rates")]
     NoFit,
     /// Too few steps that tell it.
-    #[error("{found} steps tell the time course, {needed} are needed")]
+    #[error("{found} steps tell the change over time, {needed} are needed")]
     FewSteps {
         /// Such steps.
         found: usize,
@@ -76,7 +76,7 @@ pub enum NoTimeConstant {
         needed: usize,
     },
     /// The search ends at its bound.
-    #[error("the time course fits best with a time constant outside {low_s:.4} to {high_s:.1} s")]
+    #[error("the change over time fits best with a time constant outside {low_s:.4} to {high_s:.1} s")]
     OutOfRange {
         /// Shortest tried, seconds.
         low_s: f64,

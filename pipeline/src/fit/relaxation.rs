@@ -3,7 +3,7 @@
 //! Under a constant drive r(t) = F + (r_before - F) exp(-t/tau_rate), with r_before the rate before the step. One tau_rate is
 //! fitted to all steps of a cell, the target F of each step free, by the deviance of [`super::decay`] over the intervals.
 //! Where the cell adapts, onset and steady rates differ and the rate falls instead of rising: the cell is then refused
-//! with that reason, since the two time courses cannot be told apart from intervals alone.
+//! with that reason, since the two changes over time cannot be told apart from intervals alone.
 //!
 //! The first spike of a step is the most telling one and the least certain: it comes when the integral of the rate
 //! passes what was left to go at the onset, a full unit for a cell at rest that integrates its input, anything between
