@@ -15,6 +15,7 @@
 pub mod assess;
 pub mod curve;
 pub mod fit;
+pub mod predict;
 pub mod rates;
 pub mod recording;
 pub mod run;

@@ -6,6 +6,7 @@
 
 mod bootstrap;
 mod effective_threshold;
+mod adaptation;
 mod extra_variance;
 mod goodness;
 mod hyperbola;

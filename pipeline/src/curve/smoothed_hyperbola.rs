@@ -302,6 +302,11 @@ impl Kernel {
         }
     }
 
+    /// The `s` it was made for.
+    pub fn noise(&self) -> f64 {
+        self.s
+    }
+
     /// h and its gradient at `z`.
     #[inline(always)]
     pub fn at(&self, z: f64) -> Slope {

@@ -2,6 +2,9 @@
 
 pub mod bootstrap;
 pub mod bootstrap_interval;
+pub mod adaptation;
+pub mod adaptation_time;
+pub mod decay;
 mod estimates;
 mod extra_sd;
 mod gaps;
@@ -15,6 +18,7 @@ mod resample_fit;
 pub mod rival_fit;
 mod rival_starts;
 pub mod robust;
+pub mod relaxation;
 pub mod solver;
 mod starts;
 

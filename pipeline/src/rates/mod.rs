@@ -1,10 +1,12 @@
 //! Intervals of one step and response window -> rate, its standard error, interval statistics.
 
+mod instantaneous;
 mod intervals;
 mod windows;
 
 use serde::{Deserialize, Serialize};
 
+pub use instantaneous::{IntervalRate, interval_rates};
 pub use intervals::{cv, cv2, detrended_cv, interval_rate, lv, lvr};
 pub use windows::{CellCv, cell_interval_cv, fit_se, step_rates};
 
