@@ -4,9 +4,9 @@
 // `!(error <= limit)` is meant: it also catches what is not a number.
 #![allow(clippy::neg_cmp_op_on_partial_ord)]
 
+mod adaptation;
 mod bootstrap;
 mod effective_threshold;
-mod adaptation;
 mod extra_variance;
 mod goodness;
 mod hyperbola;

@@ -2,8 +2,8 @@
 
 pub mod flags;
 pub mod goodness;
-pub mod repeats;
 pub mod inhibition;
+pub mod repeats;
 pub mod verdict;
 
 use std::sync::Arc;

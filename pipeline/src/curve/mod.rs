@@ -1,13 +1,13 @@
 //! Rate functions: one a file, with value, gradient, limits and citation.
 
-pub mod hill;
 pub mod adapting;
+pub mod hill;
 pub mod hyperbola;
 pub mod logistic;
 pub mod quadrature;
 pub mod ramp;
-pub mod refractory_integrator;
 pub mod rate_function;
+pub mod refractory_integrator;
 pub mod smoothed_hyperbola;
 pub mod smoothed_ramp;
 pub mod square_root;

@@ -86,6 +86,7 @@ mod tests {
                 step(1, "1", 0.0, 1.0),
             ],
             spikes_s: vec![0.25, 0.5, 0.75, 1.25, 1.75, 0.5, 0.5],
+            duplicate_spikes: 0,
             refusal: None,
         };
         let rows = interval_rates(&cell, &meet(&cell));
