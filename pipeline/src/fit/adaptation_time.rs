@@ -637,7 +637,7 @@ mod tests {
         mut mark: impl FnMut() -> f64,
     ) -> Vec<f64> {
         let dt = 2e-5;
-        let keep = (-dt / tau as f64).exp();
+        let keep = (-dt / tau).exp();
         let (mut a, mut t, mut count, mut target) = (0.0, 0.0, 0.0, mark());
         let mut list = Vec::new();
         while t < length {
