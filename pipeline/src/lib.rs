@@ -9,6 +9,8 @@
 //!  refusals       protocol    responses    profiles           flags        Parquet
 //! ```
 //!
+//! Beside the line stands [`predict`]: a fitted cell run through any input, compared with its spikes.
+//!
 //! [`run`] is the only place that knows the whole line; no room uses a later one. This crate computes and
 //! writes files: it never prints, never exits, and knows nothing of the command line.
 

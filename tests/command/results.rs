@@ -50,6 +50,88 @@ fn same_bytes_for_one_thread_and_two() {
 }
 
 #[test]
+fn bootstrap_robust_fit_and_chosen_curves_give_the_same_bytes_for_any_threads() {
+    let home = tempfile::tempdir().unwrap();
+    let mut runs = Vec::new();
+    for threads in ["1", "2"] {
+        let out = home.path().join(threads);
+        halfrise(&[
+            "fit",
+            &demo("veltmoor-conductance"),
+            "--out",
+            text(&out),
+            "--threads",
+            threads,
+            "--quiet",
+            "--responses",
+            "whole",
+            "--no-figures",
+            "--bootstrap",
+            "100",
+            "--robust",
+            "--curves",
+            "ramp,hill",
+        ])
+        .succeeds();
+        runs.push(tables(&out));
+    }
+    assert!(runs[0] == runs[1]);
+    let bytes = |name: &str| &runs[0].iter().find(|(file, _)| file == name).unwrap().1;
+    let holds = |name: &str, word: &str| {
+        bytes(name)
+            .windows(word.len())
+            .any(|part| part == word.as_bytes())
+    };
+    assert!(holds("parameters.parquet", "half_rise_bca_lo"));
+    assert!(holds("parameters.parquet", "noise_sd_percentile_hi"));
+    let run: serde_json::Value =
+        serde_json::from_slice(&std::fs::read(home.path().join("1/run.json")).unwrap()).unwrap();
+    assert_eq!(run["seed"], 1);
+    assert_eq!(run["settings"]["curves"], serde_json::json!(["ramp", "hill"]));
+    // 3 rows for every fitted response, against 8.
+    let all = home.path().join("all");
+    halfrise(&[
+        "fit",
+        &demo("veltmoor-conductance"),
+        "--out",
+        text(&all),
+        "--quiet",
+        "--responses",
+        "whole",
+        "--no-figures",
+    ])
+    .succeeds();
+    let rows = |folder: &std::path::Path| -> u64 {
+        let run: serde_json::Value =
+            serde_json::from_slice(&std::fs::read(folder.join("run.json")).unwrap()).unwrap();
+        let tables = run["tables"].as_array().unwrap();
+        tables.iter().find(|t| t["name"] == "goodness").unwrap()["rows"]
+            .as_u64()
+            .unwrap()
+    };
+    assert!(rows(&home.path().join("1")) * 2 < rows(&all));
+}
+
+#[test]
+fn a_rate_function_that_is_none_is_named_with_those_that_are() {
+    let home = tempfile::tempdir().unwrap();
+    let out = home.path().join("out");
+    let fit = |more: [&str; 2]| {
+        halfrise(&[
+            "fit",
+            &demo("veltmoor-current"),
+            "--out",
+            text(&out),
+            more[0],
+            more[1],
+        ])
+    };
+    fit(["--curves", "ramp,step"]).fails(2, &["step", "refractory-integrator"]);
+    fit(["--bootstrap", "7"]).fails(2, &["bootstrap = 7", "100 to 1000000"]);
+    assert!(!out.exists());
+}
+
+#[test]
 fn refused_rows_of_the_demo_are_those_it_lists() {
     let home = tempfile::tempdir().unwrap();
     let out = home.path().join("out");

@@ -139,45 +139,6 @@ pub(super) fn refit_from(points: &[Point], scatter: Scatter, fit: &mut MainFit, 
     );
 }
 
-/// The smoothed ramp fitted on its own terms: three parameters and its own extra variance.
-#[derive(Clone, Debug)]
-pub struct RampFit {
-    /// The minimum; the second parameter, 1/max rate, is held at 0.
-    pub solution: Solution<4>,
-    /// Points grouped by drive with the final weights.
-    pub levels: Levels,
-    /// Extra variance, Hz^2.
-    pub extra_variance: f64,
-    /// Whether solver and extra variance converged.
-    pub converged: bool,
-    /// Passes over the levels.
-    pub evaluations: u64,
-}
-
-/// Fits the smoothed ramp to the same points, starting from the ramp that `main` has found at its own weights.
-pub fn fit_ramp(points: &[Point], scatter: Scatter, main: &MainFit) -> RampFit {
-    let mut options = main.options;
-    options.fixed[1] = true;
-    let mut levels = main.levels.clone();
-    let mut solution = main.ramp;
-    let mut search = Search {
-        points,
-        scatter,
-        options,
-        variance: main.extra_variance,
-        evaluations: 0,
-        residuals: Vec::new(),
-    };
-    let converged = search.settle(&mut levels, &mut solution, &options, PARAMETERS - 1);
-    RampFit {
-        solution,
-        levels,
-        extra_variance: search.variance,
-        converged,
-        evaluations: search.evaluations,
-    }
-}
-
 /// Whether two minima differ by more than the solver's tolerance could explain.
 fn far_apart(a: &Solution<4>, b: &Solution<4>) -> bool {
     let curvature = &b.sums.curvature;
