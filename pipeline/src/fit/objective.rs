@@ -131,8 +131,15 @@ impl LeastSquares<4> for Objective<'_> {
                 sums,
             },
         });
+        // A noise SD far below the spacing of the drives changes nothing and would leave the curvature singular, so that
+        // no step could be judged. Cost and gradient, and with them the minimum, are untouched.
+        let gain = sums.curvature[0][0] * parameters[0] * parameters[0];
+        sums.curvature[3][3] += NOISE_CURVATURE * gain;
     }
 }
+
+/// Least curvature of ln noise SD, as a fraction of that of ln gain.
+const NOISE_CURVATURE: f64 = 1e-13;
 
 /// What to do with the curve at each drive.
 pub(super) trait Each {
