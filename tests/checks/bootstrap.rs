@@ -284,5 +284,6 @@ fn a_thousand_resamples_cost_less_than_sixty_fits() {
         1e3 * resampled,
         resampled / plain
     );
-    assert!(resampled < 60.0 * plain);
+    // Counted in passes of the curve, which no other work on the machine changes; the time is for the reader.
+    assert!(more < 60 * passes, "{more} passes against {passes}");
 }
