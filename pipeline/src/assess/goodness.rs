@@ -33,23 +33,9 @@ pub struct FittedCurve<'a> {
 pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
     let n = fit.points.len();
     let mut out = Goodness {
-        curve: fit.curve,
-        parameters: fit.parameters,
-        steps: n,
-        log_likelihood: None,
-        aicc: None,
-        aicc_weight: None,
-        bic: None,
-        rmse_hz: None,
-        r2: None,
-        reduced_chi2: None,
-        lack_of_fit_f: None,
-        lack_of_fit_p: None,
-        runs_p: None,
-        loo_rmse_hz: None,
         converged: fit.converged,
-        reason: "fitted".into(),
         evaluations: fit.evaluations,
+        ..unmeasured(fit.curve, fit.parameters, n, "fitted")
     };
     if !fit.converged {
         out.reason = "the search for the best curve did not settle".into();
@@ -96,9 +82,13 @@ pub fn goodness(fit: &FittedCurve<'_>) -> Goodness {
 
 /// The row of a rate function that could not be fitted to `steps` steps, with the reason.
 pub fn not_fitted(curve: Curve, steps: usize, reason: &str) -> Goodness {
+    unmeasured(curve.name(), curve.parameters(), steps, reason)
+}
+
+fn unmeasured(curve: &'static str, parameters: usize, steps: usize, reason: &str) -> Goodness {
     Goodness {
-        curve: curve.name(),
-        parameters: curve.parameters(),
+        curve,
+        parameters,
         steps,
         log_likelihood: None,
         aicc: None,

@@ -15,11 +15,6 @@ mod vector_exp;
 
 use serde::{Deserialize, Serialize};
 
-/// Name of the main rate function in the tables.
-pub const SMOOTHED_HYPERBOLA: &str = Curve::SmoothedHyperbola.name();
-/// Name of the smoothed ramp in the tables.
-pub const SMOOTHED_RAMP: &str = Curve::SmoothedRamp.name();
-
 /// The rate functions that a cell can be fitted with.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, PartialOrd, Ord, Serialize, Deserialize)]
 #[serde(rename_all = "kebab-case")]

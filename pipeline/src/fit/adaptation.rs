@@ -17,7 +17,7 @@
 //! and it reaches R/2 at half_rise + alpha R/2 above threshold.
 
 use super::estimates::{Estimate, t_quantile};
-use super::extra_sd::extra_variance;
+use super::extra_sd::Settling;
 use super::main_fit::{self, Scatter, covariance};
 use super::objective::{Chart, Levels, Point, evaluate};
 use super::profile::{Side, SideSearch};
@@ -40,8 +40,6 @@ const ROUNDS: usize = 200;
 const RESTARTS: usize = 4;
 /// Squared residual, in units of the standard error, below which a point lies on the curve to rounding.
 const EXACT: f64 = 1e-14;
-/// The extra variance has settled once it moves by less than this fraction of the total variance.
-const SETTLED: f64 = 1e-7;
 
 /// A rate of one step and what it shows of the onset.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -415,13 +413,11 @@ impl Search<'_> {
 
     /// Curve at given weights and extra variance at a given curve, in turn until both stand still.
     fn settle(&mut self, best: &mut Solution<PARAMETERS>) -> bool {
-        let errors: Vec<f64> = self.points.iter().map(|p| p.point.se).collect();
-        let interval_variance = errors.iter().map(|e| e * e).sum::<f64>() / errors.len() as f64;
+        let mut settling = Settling::new(self.points.iter().map(|p| p.point.se), self.degrees());
         let options = SolverOptions {
             initial_damping: 1e-6,
             ..self.options
         };
-        let mut last_change = f64::INFINITY;
         for round in 0..ROUNDS {
             *best = self.minimise(best.parameters, &options);
             let residuals: Vec<f64> = self
@@ -430,20 +426,12 @@ impl Search<'_> {
                 .zip(self.points)
                 .map(|(f, p)| p.point.rate - f)
                 .collect();
-            let target = extra_variance(&residuals, &errors, self.degrees());
-            let change = target - self.variance;
-            if change.abs() <= SETTLED * (target + interval_variance) {
+            let change = settling.change(&residuals, self.variance);
+            if change.settled {
                 // Points that lie on the curve to rounding leave the solver nothing to go by.
                 return best.converged || best.cost() < EXACT * self.points.len() as f64;
             }
-            // Changes shrink by a steady factor: the sum of those to come at once (Aitken).
-            let ratio = if round > 1 {
-                (change / last_change).clamp(-0.9, 0.6)
-            } else {
-                0.0
-            };
-            last_change = change;
-            self.variance = (self.variance + change / (1.0 - ratio)).max(0.0);
+            self.variance = settling.advance(round, self.variance, change);
         }
         false
     }

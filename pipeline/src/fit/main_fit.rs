@@ -1,6 +1,6 @@
 //! The fit of the smoothed hyperbola to one response of one cell: curve parameters and extra SD together.
 
-use super::extra_sd::extra_variance;
+use super::extra_sd::Settling;
 use super::objective::{Chart, Levels, Objective, Point, evaluate};
 use super::solver::{Solution, SolverOptions, cholesky_solve, minimise};
 use super::starts::starts;
@@ -53,9 +53,6 @@ pub struct MainFit {
     /// Passes of the curve over all levels.
     pub evaluations: u64,
 }
-
-/// The extra variance has settled once it moves by less than this fraction of the total variance.
-const SETTLED: f64 = 1e-7;
 
 /// How the extra variance is set.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -262,10 +259,8 @@ impl Search<'_> {
             *best = self.minimise(levels, best.parameters, options);
             return best.converged;
         }
-        let standard_errors: Vec<f64> = self.points.iter().map(|p| p.se).collect();
-        let interval_variance = standard_errors.iter().map(|e| e * e).sum::<f64>() / self.points.len() as f64;
         let degrees = (self.points.len() - parameters) as f64;
-        let mut last_change = f64::INFINITY;
+        let mut settling = Settling::new(self.points.iter().map(|p| p.se), degrees);
         for round in 0..200 {
             // Early rounds need no more than a good direction; the last ones are exact.
             let limited = SolverOptions {
@@ -275,24 +270,10 @@ impl Search<'_> {
             };
             *best = self.minimise(levels, best.parameters, &limited);
             self.set_residuals(levels, best);
-            let target = extra_variance(&self.residuals, &standard_errors, degrees);
-            let change = target - self.variance;
-            // Changes shrink by a steady factor: take the sum of those to come at once (Aitken), which also brings to
-            // rest a minimum that hops to and fro with the weights.
-            let ratio = if round > 1 {
-                (change / last_change).clamp(-0.9, 0.6)
-            } else {
-                0.0
-            };
-            last_change = change;
-            let step = if ratio.is_finite() {
-                change / (1.0 - ratio)
-            } else {
-                change
-            };
-            self.variance = (self.variance + step).max(0.0);
+            let change = settling.change(&self.residuals, self.variance);
+            self.variance = settling.advance(round, self.variance, change);
             levels.reweigh(self.points, self.variance);
-            if change.abs() <= SETTLED * (target + interval_variance) {
+            if change.settled {
                 let exact = SolverOptions {
                     initial_damping: 1e-7,
                     ..*options
@@ -358,6 +339,17 @@ impl MainFit {
         held.at_bound[3] = true;
         covariance(&held)
     }
+}
+
+/// Variance d' C d of a quantity with derivatives d, never below zero.
+pub fn spread<const P: usize>(covariance: &[[f64; P]; P], derivatives: &[f64; P]) -> f64 {
+    let mut sum = 0.0;
+    for i in 0..P {
+        for j in 0..P {
+            sum += derivatives[i] * covariance[i][j] * derivatives[j];
+        }
+    }
+    sum.max(0.0)
 }
 
 /// Inverse of the curvature over the parameters that are not at a bound; rows of the others are zero. `None` unless

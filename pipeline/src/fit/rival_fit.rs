@@ -9,9 +9,9 @@
 //! is a bounded problem of its own; one start or more lies in every gap that can hold the minimum, the best few are
 //! followed, and a search that ends on a drive is continued on its other side.
 
-use super::extra_sd::extra_variance;
+use super::extra_sd::Settling;
 use super::gaps::{Cost, Gap, Rival, descend, ends, gap_of, minimise_in_gap};
-use super::main_fit::{self, MainFit, Scatter, covariance};
+use super::main_fit::{self, MainFit, Scatter, covariance, spread};
 use super::objective::{Chart, Levels, Point, evaluate};
 use super::rival_starts::Start;
 use super::solver::{LeastSquares, NormalSums, Solution, SolverOptions, cholesky_solve, minimise};
@@ -44,9 +44,6 @@ const SWITCHES: usize = 6;
 
 /// Rounds of curve and extra variance before the fit gives up.
 const ROUNDS: usize = 200;
-
-/// The extra variance has settled once it moves by less than this fraction of the total variance.
-const SETTLED: f64 = 1e-7;
 
 /// Why a curve has no fit to a cell.
 #[derive(Clone, Debug, PartialEq, thiserror::Error)]
@@ -572,10 +569,8 @@ impl<const P: usize> Search<'_, P> {
 
     /// Alternates between the curve at given weights and the extra variance at a given curve until both stand still.
     fn settle<R: Rival<P>>(&mut self, best: &mut Solution<P>) -> bool {
-        let errors: Vec<f64> = self.points.iter().map(|p| p.se).collect();
-        let interval_variance = errors.iter().map(|e| e * e).sum::<f64>() / errors.len() as f64;
         let degrees = (self.points.len() - P) as f64;
-        let mut last_change = f64::INFINITY;
+        let mut settling = Settling::new(self.points.iter().map(|p| p.se), degrees);
         for round in 0..ROUNDS {
             let limited = SolverOptions {
                 decrease_tolerance: 1e-8,
@@ -585,24 +580,10 @@ impl<const P: usize> Search<'_, P> {
             };
             *best = self.inside::<R>(best.parameters, &limited);
             self.set_residuals::<R>(&best.parameters);
-            let target = extra_variance(&self.residuals, &errors, degrees);
-            let change = target - self.variance;
-            // The sum of the changes to come, which shrink by a steady factor (Aitken); it also brings to rest a
-            // minimum that hops to and fro with the weights.
-            let ratio = if round > 1 {
-                (change / last_change).clamp(-0.9, 0.6)
-            } else {
-                0.0
-            };
-            last_change = change;
-            let step = if ratio.is_finite() {
-                change / (1.0 - ratio)
-            } else {
-                change
-            };
-            self.variance = (self.variance + step).max(0.0);
+            let change = settling.change(&self.residuals, self.variance);
+            self.variance = settling.advance(round, self.variance, change);
             self.levels.reweigh(self.points, self.variance);
-            if change.abs() <= SETTLED * (target + interval_variance) {
+            if change.settled {
                 let exact = SolverOptions {
                     initial_damping: 1e-7,
                     ..self.options
@@ -616,7 +597,7 @@ impl<const P: usize> Search<'_, P> {
                 if !moved {
                     return best.converged;
                 }
-                last_change = f64::INFINITY;
+                settling.restart();
             }
         }
         false
@@ -718,17 +699,6 @@ fn same<const P: usize>(a: &Solution<P>, b: &Solution<P>) -> bool {
     }
     // A threshold on a drive carries no curvature of that drive's point: the positions must agree too.
     distance <= 1e-3 && (0..P).all(|i| (a.parameters[i] - b.parameters[i]).abs() <= 1e-2)
-}
-
-/// d' C d, never below zero.
-pub(super) fn spread<const P: usize>(covariance: &[[f64; P]; P], derivatives: &[f64; P]) -> f64 {
-    let mut sum = 0.0;
-    for i in 0..P {
-        for j in 0..P {
-            sum += derivatives[i] * covariance[i][j] * derivatives[j];
-        }
-    }
-    sum.max(0.0)
 }
 
 #[cfg(test)]

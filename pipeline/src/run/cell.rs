@@ -8,7 +8,7 @@ use crate::assess::{
     Ceiling, CellResult, CurvePoint, Goodness, ResponseResult, RivalCurve, Severity, Status,
 };
 use crate::curve::Curve;
-use crate::fit::main_fit::{self, MainFit, Scatter};
+use crate::fit::main_fit::{self, MainFit, Scatter, spread};
 use crate::fit::objective::{Chart, evaluate};
 use crate::fit::{
     BootstrapSettings, Estimates, Point, RivalFit, bootstrap, estimates, fit_rival, leave_one_level_out,
@@ -383,17 +383,6 @@ impl Case<'_> {
         );
         curve
     }
-}
-
-/// d' C d, never below zero.
-fn spread(covariance: &[[f64; 4]; 4], derivatives: &[f64; 4]) -> f64 {
-    let mut sum = 0.0;
-    for i in 0..4 {
-        for j in 0..4 {
-            sum += derivatives[i] * covariance[i][j] * derivatives[j];
-        }
-    }
-    sum.max(0.0)
 }
 
 /// A fit with what it was made from.

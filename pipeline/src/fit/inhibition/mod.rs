@@ -24,7 +24,7 @@ use form::Law;
 use joint::{Joint, evaluate};
 use search::Found;
 
-use super::main_fit::covariance;
+use super::main_fit::{covariance, spread};
 use super::objective::{Chart, Point};
 use crate::recording::CellConstants;
 
@@ -167,17 +167,6 @@ fn rates<const P: usize>(
         });
     });
     rates
-}
-
-/// d' C d, never below zero.
-fn spread<const P: usize>(covariance: &[[f64; P]; P], derivatives: &[f64; P]) -> f64 {
-    let mut sum = 0.0;
-    for i in 0..P {
-        for j in 0..P {
-            sum += derivatives[i] * covariance[i][j] * derivatives[j];
-        }
-    }
-    sum.max(0.0)
 }
 
 /// All three forms fitted to one cell.

@@ -3,14 +3,13 @@
 
 use super::form::Law;
 use super::joint::{Joint, Objective, evaluate};
-use crate::fit::extra_sd::extra_variance;
+use crate::fit::extra_sd::Settling;
 use crate::fit::objective::{Chart, Point};
 use crate::fit::solver::{Solution, SolverOptions, minimise};
 
 /// Starts that are followed to the end after the short search.
 const FOLLOWED: usize = 5;
-/// The extra variance has settled once it moves by less than this fraction of the total variance.
-const SETTLED: f64 = 1e-7;
+
 /// Bounds as in the main fit, in units of the range of drives and of the peak rate.
 const NOISE_BOUNDS: [f64; 2] = [1e-3, 10.0];
 const GAIN_BOUNDS: [f64; 2] = [1e-4, 1e6];
@@ -282,10 +281,8 @@ impl Search<'_> {
         best: &mut Solution<P>,
         options: &SolverOptions<P>,
     ) -> bool {
-        let standard_errors: Vec<f64> = self.points.iter().map(|p| p.se).collect();
-        let interval_variance = standard_errors.iter().map(|e| e * e).sum::<f64>() / self.points.len() as f64;
         let degrees = (self.points.len() - P) as f64;
-        let mut last_change = f64::INFINITY;
+        let mut settling = Settling::new(self.points.iter().map(|p| p.se), degrees);
         for round in 0..200 {
             let limited = SolverOptions {
                 initial_damping: if round == 0 { 1e-4 } else { 1e-7 },
@@ -299,23 +296,10 @@ impl Search<'_> {
                 .map(|(f, p)| p.rate - f)
                 .collect();
             self.evaluations += 1;
-            let target = extra_variance(&residuals, &standard_errors, degrees);
-            let change = target - self.variance;
-            // Changes shrink by a steady factor: take the sum of those to come at once (Aitken).
-            let ratio = if round > 1 {
-                (change / last_change).clamp(-0.9, 0.6)
-            } else {
-                0.0
-            };
-            last_change = change;
-            let step = if ratio.is_finite() {
-                change / (1.0 - ratio)
-            } else {
-                change
-            };
-            self.variance = (self.variance + step).max(0.0);
+            let change = settling.change(&residuals, self.variance);
+            self.variance = settling.advance(round, self.variance, change);
             joint.reweigh(self.points, self.variance);
-            if change.abs() <= SETTLED * (target + interval_variance) {
+            if change.settled {
                 let exact = SolverOptions {
                     initial_damping: 1e-7,
                     ..*options
